@@ -1,0 +1,182 @@
+"""Every channel of a capture at once: one forward transform shared by all, a slice of its bins for each.
+
+Overlap-save: a channel takes ``m`` bins about its frequency, multiplies them by its own filter's response (centred on
+its exact frequency, whatever the bin spacing), and an ``m``-point inverse transform gives it at the low rate; what is
+left of its frequency is turned out by a phase made from the absolute sample index, so it never drifts. Four hops go
+through each transform call, because ``scipy.fft`` works on four rows side by side.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import numpy as np
+import scipy.fft
+from numpy.lib.stride_tricks import sliding_window_view
+from numpy.typing import NDArray
+
+from rxchain.errors import SettingError
+from rxchain.kernels.fir import lowpass
+from rxchain.streams import ComplexBlock, Floats
+from rxchain.tuning.plan import STOP_DB, BankPlan
+
+HOPS_A_BATCH = 4
+
+
+class ChannelBank:
+    """Tunes, filters and decimates groups of channels; each group has its own width and number of channels.
+
+    process(iq) : complex64, (n,), any n, full scale 1.0. Returns one complex64 block ``(channels, samples)`` a group,
+        in the order of the groups; a batch of four hops at a time, so often empty.
+    Channel sample ``k`` is the instant ``k / rate`` after the first sample of the stream; the filter's delay is out.
+    """
+
+    def __init__(self, plan: BankPlan, groups: Sequence[tuple[int, Floats]]) -> None:
+        """``groups`` : bins and channel offsets from the capture's centre, in hertz, of each group."""
+        self.plan = plan
+        self._groups = [_Group(plan, bins, np.asarray(offsets_hz, dtype=np.float64)) for bins, offsets_hz in groups]
+        self._spectrum = np.empty(
+            (HOPS_A_BATCH, plan.length + max((g.bins for g in self._groups), default=0)), np.complex64
+        )
+        self._batch = HOPS_A_BATCH * plan.hop
+        self._pending = np.zeros(plan.overlap + self._batch, np.complex64)
+        self.reset()
+
+    @property
+    def delay_samples(self) -> int:
+        """Samples of the capture that must have come after an instant before its channel samples come out."""
+        return self.plan.overlap // 2 + self._batch
+
+    def reset(self) -> None:
+        """As new: time starts again at 0."""
+        self._pending[:] = 0
+        self._filled = self.plan.overlap
+        self._hops = 0
+        self._received = 0
+        self._delivered = [0] * len(self._groups)
+
+    def process(self, iq: ComplexBlock) -> list[ComplexBlock]:
+        """The channel samples that have become complete, a block for each group."""
+        self._received += len(iq)
+        made: list[list[ComplexBlock]] = [[] for _ in self._groups]
+        while len(iq):
+            n = min(len(iq), len(self._pending) - self._filled)
+            self._pending[self._filled : self._filled + n] = iq[:n]
+            self._filled += n
+            iq = iq[n:]
+            if self._filled == len(self._pending):
+                for blocks, block in zip(made, self._transform(), strict=True):
+                    blocks.append(block)
+        return [
+            np.concatenate(blocks, axis=1) if len(blocks) != 1 else blocks[0]
+            for blocks in (made_of or [group.nothing] for made_of, group in zip(made, self._groups, strict=True))
+        ]
+
+    def flush(self) -> list[ComplexBlock]:
+        """The rest, as if silence followed: in all, one channel sample for each of its periods begun in the stream."""
+        received = self._received
+        wanted = [-(-received * group.bins // self.plan.length) for group in self._groups]
+        tails: list[list[ComplexBlock]] = [[group.nothing] for group in self._groups]
+        while any(done < want for done, want in zip(self._delivered, wanted, strict=True)):
+            missing = len(self._pending) - self._filled
+            for k, block in enumerate(self.process(np.zeros(missing, np.complex64))):
+                surplus = max(0, self._delivered[k] - wanted[k])
+                tails[k].append(block[:, : max(0, block.shape[1] - surplus)])
+                self._delivered[k] -= surplus
+        self._received = received
+        return [np.concatenate(blocks, axis=1) for blocks in tails]
+
+    def _transform(self) -> list[ComplexBlock]:
+        plan = self.plan
+        hops = sliding_window_view(self._pending, plan.length)[:: plan.hop]
+        self._spectrum[:, : plan.length] = scipy.fft.fft(hops, axis=1)
+        self._spectrum[:, plan.length :] = self._spectrum[:, : self._spectrum.shape[1] - plan.length]
+        blocks = []
+        for k, group in enumerate(self._groups):
+            block = group.cut(self._spectrum, self._hops)
+            lead = max(0, plan.overlap_of(group.bins) // 2 - self._hops * group.hop)
+            block = block[:, lead:]  # the first outputs lie before the stream's first sample
+            self._delivered[k] += block.shape[1]
+            blocks.append(block)
+        self._hops += HOPS_A_BATCH
+        self._pending[: plan.overlap] = self._pending[self._batch :].copy()
+        self._filled = plan.overlap
+        return blocks
+
+
+class _Group:
+    """Channels of one width: their slices, responses and rotations."""
+
+    def __init__(self, plan: BankPlan, bins: int, offsets_hz: Floats) -> None:
+        self.bins = bins
+        self._length = plan.length
+        self._discard = plan.overlap_of(bins)
+        self.hop = bins - self._discard
+        limit_hz = plan.capture_rate_hz / 2.0
+        if len(offsets_hz) and np.max(np.abs(offsets_hz)) > limit_hz:
+            worst_hz = offsets_hz[np.argmax(np.abs(offsets_hz))]
+            raise SettingError(
+                "frequency", f"{worst_hz:+.0f}Hz from the centre", f"outside the capture's ±{limit_hz:.0f} Hz"
+            )
+        exact_bin = offsets_hz * plan.length / plan.capture_rate_hz
+        nearest = np.round(exact_bin)
+        self._first_bin = nearest.astype(np.int64) - bins // 2
+        self._start = self._first_bin % plan.length
+        self._responses = _responses(plan, bins, exact_bin - nearest)
+        # What an inverse transform over a slice starting at `first_bin` leaves to turn, in cycles per output sample.
+        self._cycles = -((exact_bin - self._first_bin) / bins)
+        within_hop = np.outer(self._cycles, np.arange(self.hop))
+        self._turn = np.exp(2j * np.pi * (within_hop - np.floor(within_hop))).astype(np.complex64)
+        self.nothing = np.zeros((len(offsets_hz), 0), np.complex64)
+
+    def cut(self, spectrum: ComplexBlock, hops_before: int) -> ComplexBlock:
+        """The group's channels over the batch whose spectra are given (with the first bins repeated at the end)."""
+        n_channels, n_hops = len(self._start), spectrum.shape[0]
+        sliced = sliding_window_view(spectrum, self.bins, axis=1)[:, self._start]
+        np.multiply(sliced, self._responses, out=sliced)
+        series = scipy.fft.ifft(sliced, axis=2, overwrite_x=True)
+        block = np.empty((n_channels, n_hops * self.hop), np.complex64)
+        for k in range(n_hops):
+            turn = self._turn * self._phasor(hops_before + k)[:, None]
+            np.multiply(series[k, :, self._discard :], turn, out=block[:, k * self.hop : (k + 1) * self.hop])
+        return block
+
+    def _phasor(self, hop_index: int) -> NDArray[np.complex64]:
+        """Turn at the first kept sample of a hop, from its absolute index: float64, modulo one turn, hence no drift."""
+        first_output = hop_index * self.hop
+        first_input = hop_index * (self._length - self._length * self._discard // self.bins)
+        overlap = self._length * self._discard // self.bins
+        # The slice's own frequency, whole bins, over the transform's start: exact in integers.
+        start_turn = (self._first_bin * (first_input - overlap)) % self._length / self._length
+        turned = first_output * self._cycles
+        cycles = turned - np.floor(turned) - start_turn
+        phasor: NDArray[np.complex64] = np.exp(2j * np.pi * cycles).astype(np.complex64)
+        return phasor
+
+
+def _responses(plan: BankPlan, bins: int, fractions: Floats) -> NDArray[np.complex64]:
+    """Each channel's filter at its slice's bins, (channels, bins), scaled for the shorter inverse transform.
+
+    ``fractions`` : how far each channel lies from its nearest bin, in bins; the filter is centred there.
+    """
+    nearby = (np.arange(bins) - bins // 2) % plan.length
+    distinct, which = np.unique(np.round(fractions, 9), return_inverse=True)
+    scale = bins / plan.length
+    rows = np.empty((len(distinct), bins), np.complex64)
+    n_taps = plan.overlap + 1
+    if bins == plan.length:
+        delays = np.exp(-2j * np.pi * np.outer(np.ones(len(distinct)), nearby) * (plan.overlap // 2) / plan.length)
+        shift = np.exp(2j * np.pi * distinct * (plan.overlap // 2) / plan.length)
+        rows[:] = delays * shift[:, None]
+    else:
+        taps = lowpass(
+            n_taps,
+            plan.rate_hz(bins) / 2.0 - (plan.rate_hz(bins) / 2.0 - plan.usable_hz(bins)) / 2.0,
+            plan.capture_rate_hz,
+            STOP_DB,
+        )
+        t = np.arange(n_taps)
+        for row, fraction in zip(rows, distinct, strict=True):
+            centred = taps * np.exp(2j * np.pi * fraction * t / plan.length)
+            row[:] = scipy.fft.fft(centred, plan.length)[nearby] * scale
+    return rows[which] if len(distinct) > 1 else rows[:1]
