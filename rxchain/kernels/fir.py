@@ -66,7 +66,7 @@ def bandpass(n_taps: int, low_hz: float, high_hz: float, rate_hz: float, attenua
     return np.asarray(taps * np.exp(2j * np.pi * middle_hz / rate_hz * t) / taps.sum())
 
 
-def mean_kernel(first_null_hz: float, rate_hz: float, sidelobe_db: float = 60.0) -> Floats:
+def mean_kernel(first_null_hz: float, rate_hz: float, sidelobe_db: float = 70.0) -> Floats:
     """Weights of a running mean that ignores everything from ``first_null_hz`` up, to the side-lobe level.
 
     A Dolph-Chebyshev window (C. L. Dolph, Proc. IRE 34 (1946) 335-348): the shortest weighting with such side lobes.

@@ -1,0 +1,265 @@
+"""What is wanted of one channel, from the words of a ``--channel`` option or a ``[[channel]]`` table."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from itertools import pairwise
+from pathlib import Path
+from typing import Literal, TypeAlias
+
+from rxchain.emissions import Emission, emission_named
+from rxchain.errors import SettingError
+from rxchain.units import format_frequency, parse_band_hz, parse_frequency_hz
+
+AUTO: Literal["auto"] = "auto"
+OFF: Literal["off"] = "off"
+AutoOrLevel: TypeAlias = "Literal['auto', 'off'] | float"
+
+DETECTORS = (AUTO, "envelope", "rectifier", "coherent")
+SIDEBANDS = ("both", "upper", "lower", "better")
+DELAYS = ("full", "live")
+SLOPES = ("sent", "received")
+_NAME = re.compile(r"[A-Za-z0-9_][A-Za-z0-9._+-]{0,63}")
+_DB = re.compile(r"([+-]?\d+(?:\.\d+)?)\s*dB", re.IGNORECASE)
+
+
+@dataclass(frozen=True, slots=True)
+class ChannelSettings:
+    """One channel, every key decided.
+
+    align_hz : shift of the nominal frequency for an emission with nothing to follow.
+    transmit_response : measured gain of a vestigial transmitter: frequencies from the carrier in hertz, positive on the
+        side sent whole, and gains; None where a straight slope is assumed.
+    agc_db : ``auto``, ``off`` or a fixed gain; squelch_db : ``auto``, ``off`` or the SNR that opens.
+    """
+
+    name: str
+    frequency_hz: float
+    emission: Emission
+    audio_hz: tuple[float, float]
+    detector: str = AUTO
+    sideband: str = "both"
+    delay: str = "full"
+    align_hz: float = 0.0
+    beat_hz: float = 700.0
+    vestige_hz: float = 0.0
+    slope: str = "sent"
+    transmit_response: tuple[tuple[float, ...], tuple[float, ...]] | None = None
+    agc_db: AutoOrLevel = AUTO
+    squelch_db: AutoOrLevel = AUTO
+
+
+def channel_from_text(text: str) -> ChannelSettings:
+    """The channel that ``FREQUENCY EMISSION [key=value ...]`` asks for.
+
+    >>> channel = channel_from_text("7.1MHz J3E-LSB name=net audio=300-2700Hz agc=off squelch=off")
+    >>> channel.name, channel.frequency_hz, channel.emission.name, channel.audio_hz
+    ('net', 7100000.0, 'J3E-LSB', (300.0, 2700.0))
+    """
+    words = text.split()
+    if len(words) < 2 or "=" in words[0] or "=" in words[1]:
+        raise SettingError(
+            "channel",
+            text,
+            "a channel is FREQUENCY EMISSION [key=value ...]",
+            "write it like '7.1MHz J3E-LSB name=net'",
+        )
+    values = {"frequency": words[0], "emission": words[1]}
+    for word in words[2:]:
+        key, equals, value = word.partition("=")
+        if not equals or not value:
+            raise SettingError("channel", text, f"{word!r} is not key=value")
+        if key in values:
+            raise SettingError("channel", text, f"{key} is given twice")
+        values[key] = value
+    return channel_from_table(values)
+
+
+def channel_from_table(table: Mapping[str, object], folder: Path = Path()) -> ChannelSettings:
+    """The channel that a ``[[channel]]`` table asks for; paths in it start from ``folder``.
+
+    Raises :class:`SettingError` for an unknown key, a bad value, or keys that contradict each other.
+    """
+    values = {key: str(value) for key, value in table.items()}
+    for key in values:
+        if key not in _KEYS:
+            raise SettingError(key, values[key], "not a key of a channel", "one of " + ", ".join(_KEYS))
+    for needed in ("frequency", "emission"):
+        if needed not in values:
+            raise SettingError("channel", dict(table), f"{needed} is missing")
+    frequency_hz = parse_frequency_hz(values["frequency"])
+    emission = emission_named(values["emission"])
+    beat_hz = parse_frequency_hz(values.get("beat", "700Hz"), "beat")
+    audio_hz = _audio(values, emission, beat_hz)
+    slope, response = _slope(values.get("slope", SLOPES[0]), values.get("transmit_response"), folder)
+    channel = ChannelSettings(
+        name=_name(values.get("name") or f"{format_frequency(frequency_hz)}-{emission.name}"),
+        frequency_hz=frequency_hz,
+        emission=emission,
+        audio_hz=audio_hz,
+        detector=_one_of("detector", values.get("detector", AUTO), DETECTORS),
+        sideband=_one_of("sideband", values.get("sideband", "both"), SIDEBANDS),
+        delay=_one_of("delay", values.get("delay", "full"), DELAYS),
+        align_hz=_align(values.get("align", OFF)),
+        beat_hz=beat_hz,
+        vestige_hz=parse_frequency_hz(values["vestige"], "vestige") if "vestige" in values else audio_hz[1] / 4.0,
+        slope=slope,
+        transmit_response=response,
+        agc_db=_auto_or_level("agc", values.get("agc", AUTO)),
+        squelch_db=_auto_or_level("squelch", values.get("squelch", AUTO)),
+    )
+    for key, value in values.items():
+        _check_use(key, value, channel)
+    return channel
+
+
+def _audio(values: Mapping[str, str], emission: Emission, beat_hz: float) -> tuple[float, float]:
+    if "audio" in values:
+        low_hz, high_hz = parse_band_hz(values["audio"])
+        if low_hz < 20.0:
+            raise SettingError("audio", values["audio"], "the lower edge must be at least 20 Hz")
+        return low_hz, high_hz
+    if emission.family == "A1A":
+        return max(50.0, beat_hz - 250.0), beat_hz + 250.0
+    return emission.audio_hz
+
+
+def _name(text: str) -> str:
+    if not _NAME.fullmatch(text):
+        raise SettingError(
+            "name",
+            repr(text),
+            "a name is up to 64 letters, digits, '.', '_', '+' or '-', and starts with none of '.+-'",
+        )
+    return text
+
+
+def _one_of(key: str, value: str, known: tuple[str, ...]) -> str:
+    if value not in known:
+        raise SettingError(key, value, "not offered", "one of " + ", ".join(known))
+    return value
+
+
+def _align(value: str) -> float:
+    if value == OFF:
+        return 0.0
+    if value[0] not in "+-":
+        raise SettingError("align", value, "off, or a shift with its sign", "write it like align=+35Hz")
+    return parse_frequency_hz(value, "align")
+
+
+def _auto_or_level(key: str, value: str) -> AutoOrLevel:
+    if value == "auto":
+        return AUTO
+    if value == "off":
+        return OFF
+    match = _DB.fullmatch(value)
+    if not match:
+        raise SettingError(key, value, "auto, off, or a level in dB", f"write it like {key}=6dB")
+    return float(match[1])
+
+
+def _only_off(key: str) -> Callable[[str, ChannelSettings], None]:
+    def check(value: str, _: ChannelSettings) -> None:
+        if value != OFF:
+            raise SettingError(key, value, "only off is offered")
+
+    return check
+
+
+def _slope(
+    slope: str, response: str | None, folder: Path
+) -> tuple[str, tuple[tuple[float, ...], tuple[float, ...]] | None]:
+    if response is None:
+        return _one_of("slope", slope, SLOPES), None
+    path = folder / response
+    rule = "a text file of lines 'FREQUENCY_HZ GAIN', ascending, frequency from the carrier, at least two lines"
+    try:
+        lines = [line.split("#")[0].replace(",", " ").split() for line in path.read_text(encoding="utf-8").splitlines()]
+        rows = [(float(line[0]), float(line[1])) for line in lines if line]
+    except (OSError, UnicodeDecodeError, ValueError, IndexError) as error:
+        raise SettingError("transmit_response", response, rule, str(error)) from error
+    frequencies_hz, gains = tuple(row[0] for row in rows), tuple(row[1] for row in rows)
+    if len(rows) < 2 or any(b <= a for a, b in pairwise(frequencies_hz)):
+        raise SettingError("transmit_response", response, rule)
+    return slope, (frequencies_hz, gains)
+
+
+def _check_detector(value: str, channel: ChannelSettings) -> None:
+    if value != AUTO and value not in channel.emission.detectors:
+        raise SettingError(
+            "detector",
+            value,
+            f"cannot serve {channel.emission.name}",
+            "one of auto, " + ", ".join(channel.emission.detectors),
+        )
+
+
+def _check_sideband(value: str, channel: ChannelSettings) -> None:
+    if value == "both":
+        return
+    if not channel.emission.is_double_sideband:
+        raise SettingError("sideband", value, f"{channel.emission.name} has no choice of sidebands", "leave it out")
+    if channel.detector not in (AUTO, "coherent"):
+        raise SettingError("sideband", value, "needs the coherent detector", "use detector=coherent or auto")
+
+
+def _check_vestige(_: str, channel: ChannelSettings) -> None:
+    if not channel.emission.is_vestigial:
+        raise SettingError(
+            "vestige", f"{channel.vestige_hz:g}Hz", f"{channel.emission.name} has no vestige", "leave it out"
+        )
+    if not 50.0 <= channel.vestige_hz <= channel.audio_hz[1]:
+        raise SettingError(
+            "vestige",
+            f"{channel.vestige_hz:g}Hz",
+            f"must lie between 50 Hz and the audio band's {channel.audio_hz[1]:g} Hz",
+        )
+
+
+def _check_slope(value: str, channel: ChannelSettings) -> None:
+    if not channel.emission.is_vestigial:
+        raise SettingError("slope", value, f"{channel.emission.name} has no vestige", "leave it out")
+
+
+def _check_align(value: str, channel: ChannelSettings) -> None:
+    if value != OFF and channel.emission.family not in ("J3E", "B8E"):
+        raise SettingError("align", value, f"{channel.emission.name} is not tuned by hand", "leave it out")
+
+
+def _check_beat(value: str, channel: ChannelSettings) -> None:
+    if channel.emission.family != "A1A":
+        raise SettingError("beat", value, f"{channel.emission.name} has no beat note", "leave it out")
+    if not 100.0 <= channel.beat_hz <= 3_000.0:
+        raise SettingError("beat", value, "must lie between 100 Hz and 3 kHz")
+
+
+def _anything(_: str, __: ChannelSettings) -> None:
+    """No rule beyond those of its parser."""
+
+
+_KEYS: dict[str, Callable[[str, ChannelSettings], None]] = {
+    "frequency": _anything,
+    "emission": _anything,
+    "name": _anything,
+    "audio": _anything,
+    "detector": _check_detector,
+    "sideband": _check_sideband,
+    "delay": _anything,
+    "align": _check_align,
+    "beat": _check_beat,
+    "vestige": _check_vestige,
+    "slope": _check_slope,
+    "transmit_response": _check_slope,
+    "agc": _anything,
+    "squelch": _anything,
+    "notch": _only_off("notch"),
+    "blanker": _only_off("blanker"),
+    "log": _only_off("log"),
+}
+
+
+def _check_use(key: str, value: str, channel: ChannelSettings) -> None:
+    _KEYS[key](value, channel)

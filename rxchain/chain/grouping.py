@@ -1,0 +1,93 @@
+"""Which channels can work side by side: same rate, same thing to follow, same detectors."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from rxchain.carrier.track import Follow
+from rxchain.chain.channel_settings import AUTO, ChannelSettings
+from rxchain.emissions import Reference
+from rxchain.tuning.plan import BankPlan
+
+# What a channel needs beyond its message's upper edge: the slope of its filters and some mistuning.
+_MARGIN_HZ = 150.0
+_FOLLOW = {
+    Reference.CARRIER: Follow.CARRIER,
+    Reference.PILOT: Follow.PILOT,
+    Reference.PILOT_OR_NOMINAL: Follow.PILOT,
+    Reference.PILOT_OR_FOURTH_POWER: Follow.PILOT,
+    Reference.SQUARE: Follow.SQUARE,
+    Reference.NOMINAL: Follow.NOMINAL,
+}
+
+
+@dataclass(frozen=True, slots=True)
+class GroupKind:
+    """What all channels of a group share.
+
+    bins : width of their channels in the bank. candidates : detectors that run, the first where there is no choice.
+    message_hz : band that the follower keeps apart from the carrier; only where it makes a difference to it.
+    """
+
+    bins: int
+    follow: Follow
+    fourth_power: bool
+    live: bool
+    message_hz: tuple[float, float]
+    stereo: bool
+    n_messages: int
+    candidates: tuple[str, ...]
+
+
+def kind_of(channel: ChannelSettings, plan: BankPlan) -> GroupKind:
+    """The kind of group that a channel belongs in."""
+    emission = channel.emission
+    follow = _FOLLOW[emission.reference]
+    return GroupKind(
+        bins=plan.narrowest(half_width_hz(channel)),
+        follow=follow,
+        fourth_power=emission.reference is Reference.PILOT_OR_FOURTH_POWER,
+        live=channel.delay == "live",
+        message_hz=(0.0, 0.0) if follow in (Follow.NOMINAL, Follow.CARRIER) else _followed_band(channel),
+        stereo=emission.family == "AM-STEREO",
+        n_messages=len(emission.messages),
+        candidates=candidates_of(channel),
+    )
+
+
+def half_width_hz(channel: ChannelSettings) -> float:
+    """How far from its middle a channel must reach."""
+    high_hz = channel.audio_hz[1]
+    if channel.emission.family == "A1A":
+        return max(abs(edge_hz - channel.beat_hz) for edge_hz in channel.audio_hz) + 2 * _MARGIN_HZ
+    if channel.emission.family == "AM-STEREO":
+        return 2.0 * high_hz  # amplitude and phase modulation together: the law spreads beyond the message's band
+    return high_hz + abs(channel.align_hz) + _MARGIN_HZ
+
+
+def candidates_of(channel: ChannelSettings) -> tuple[str, ...]:
+    """The detectors to run: the one asked for, or those between which the picker decides."""
+    sides = ("upper", "lower") if channel.sideband == "better" else ()
+    if channel.detector != AUTO:
+        return (channel.detector, *sides)
+    if channel.sideband in ("upper", "lower"):
+        return ("coherent",)
+    automatic = tuple(name for name in ("coherent", "envelope") if name in channel.emission.detectors)
+    return (*automatic, *sides)
+
+
+def _followed_band(channel: ChannelSettings) -> tuple[float, float]:
+    """The part of the message that a follower must reckon with; for a vestigial emission the mirrored part alone."""
+    if channel.emission.is_vestigial:
+        return channel.audio_hz[0], channel.vestige_hz
+    return channel.audio_hz
+
+
+def grouped(
+    channels: tuple[ChannelSettings, ...], plan: BankPlan
+) -> dict[GroupKind, list[tuple[int, ChannelSettings]]]:
+    """The channels with their places in the list, under the kinds of their groups, in order of first appearance."""
+    groups: dict[GroupKind, list[tuple[int, ChannelSettings]]] = {}
+    for place, channel in enumerate(channels):
+        groups.setdefault(kind_of(channel, plan), []).append((place, channel))
+    return groups

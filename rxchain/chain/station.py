@@ -1,0 +1,88 @@
+"""A station file: a source and its channels, in TOML.
+
+::
+
+    [source]
+    path = "coast.sigmf-meta"      # a recording, from the file's own folder; or receiver = "rtlsdr:00000001"
+
+    [[channel]]
+    frequency = "518kHz"
+    emission = "A3E"
+    name = "harbour"
+
+Every error names the file, the key, the value and the rule.
+"""
+
+from __future__ import annotations
+
+import tomllib
+from dataclasses import dataclass
+from pathlib import Path
+
+from rxchain.chain.channel_settings import ChannelSettings, channel_from_table
+from rxchain.errors import RequestError, SettingError
+
+_SOURCE_KEYS = ("path", "receiver", "rate", "centre", "capture", "gain", "ppm", "direct_sampling")
+
+
+@dataclass(frozen=True, slots=True)
+class Station:
+    """source : what ``rxchain receive`` would take as SOURCE. source_options : its further keys, as written."""
+
+    source: str
+    source_options: dict[str, str]
+    channels: tuple[ChannelSettings, ...]
+
+
+def load_station(path: Path) -> Station:
+    """The station a file describes; raises :class:`RequestError` with the file's name before the fault."""
+    try:
+        table = tomllib.loads(path.read_text(encoding="utf-8"))
+    except FileNotFoundError as error:
+        raise RequestError(f"{path}: no such file") from error
+    except (OSError, UnicodeDecodeError, tomllib.TOMLDecodeError) as error:
+        raise RequestError(f"{path}: not a readable TOML file: {error}") from error
+    try:
+        return _station(table, path.parent)
+    except RequestError as error:
+        raise RequestError(f"{path}: {error}") from error
+
+
+def _station(table: dict[str, object], folder: Path) -> Station:
+    for key in table:
+        if key not in ("source", "channel"):
+            raise SettingError(key, "...", "not a table of a station file", "there are [source] and [[channel]]")
+    source = table.get("source")
+    if not isinstance(source, dict):
+        raise SettingError("source", source, "a station file has one [source] table")
+    for key in source:
+        if key not in _SOURCE_KEYS:
+            raise SettingError(
+                f"source.{key}", source[key], "not a key of a source", "one of " + ", ".join(_SOURCE_KEYS)
+            )
+    if ("path" in source) == ("receiver" in source):
+        raise SettingError("source", source, "needs either path (a recording) or receiver (rtlsdr[:serial])")
+    channels = table.get("channel")
+    if not isinstance(channels, list) or not channels:
+        raise SettingError("channel", channels, "a station file has at least one [[channel]] table")
+    options = {key: str(value) for key, value in source.items() if key not in ("path", "receiver")}
+    name = str(folder / str(source["path"])) if "path" in source else str(source["receiver"])
+    return Station(name, options, tuple(_channel(number, one, folder) for number, one in enumerate(channels, 1)))
+
+
+def _channel(number: int, table: object, folder: Path) -> ChannelSettings:
+    if not isinstance(table, dict):
+        raise SettingError(f"channel {number}", table, "must be a table")
+    try:
+        return channel_from_table(table, folder)
+    except SettingError as error:
+        raise RequestError(f"channel {number}: {error}") from error
+
+
+def check_names(channels: tuple[ChannelSettings, ...]) -> None:
+    """Raises :class:`SettingError` where two channels of a run would write the same file."""
+    seen: set[str] = set()
+    for channel in channels:
+        if channel.name.lower() in seen:
+            raise SettingError("name", channel.name, "two channels of one run have this name", "give each a name=")
+        seen.add(channel.name.lower())

@@ -1,0 +1,43 @@
+"""The coherent detector: the real part of the upright channel, each message through a filter of its own.
+
+With the carrier on the positive real axis every linear emission gives each of its messages as the real part of the
+channel convolved with complex taps: both sidebands or one of them, an asymmetric weighting of the two (vestigial), or
+the quadrature component (taps turned by a quarter). What differs between emissions is the taps alone.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+import scipy.fft
+from numpy.typing import NDArray
+
+from rxchain.kernels.overlap_save import WindowedStage
+from rxchain.kernels.smooth_numbers import next_smooth
+from rxchain.streams import ComplexBlock, FloatBlock
+
+
+class CoherentDetector(WindowedStage[np.complex64]):
+    """Messages of a group of upright channels.
+
+    taps : complex, (channels or 1, messages, n_taps), n_taps odd: the filters, symmetric about their middles.
+    process(iq) : complex64, (channels, n). Returns float32, (channels, messages, m): in the channel's own units.
+    """
+
+    def __init__(self, taps: NDArray[np.complex128], n_channels: int, hop: int = 256) -> None:
+        _, n_messages, n_taps = taps.shape
+        length = next_smooth(n_taps - 1 + hop, multiple_of=2)
+        # Re(h * y) has the spectrum (H(f) Y(f) + conj(H(-f) Y(-f))) / 2, of which half the bins are enough.
+        response = scipy.fft.fft(taps, length, axis=2)
+        positive = np.arange(length // 2 + 1)
+        self._mirror = -positive % length
+        self._direct = (response[:, :, positive] / 2).astype(np.complex64)
+        self._mirrored = np.conj(response[:, :, self._mirror] / 2).astype(np.complex64)
+        self._set_up((n_channels,), np.complex64, length - hop, hop, n_taps // 2, (n_channels, n_messages))
+
+    def _advance(self, window: ComplexBlock) -> FloatBlock:
+        spectrum = scipy.fft.fft(window, axis=1)[:, None, :]
+        n_positive = self._direct.shape[2]
+        half = self._direct * spectrum[:, :, :n_positive]
+        half += self._mirrored * np.conj(spectrum[:, :, self._mirror])
+        audio: FloatBlock = scipy.fft.irfft(half, window.shape[1], axis=2, overwrite_x=True)
+        return audio[:, :, self._windows.overlap :]
