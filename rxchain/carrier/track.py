@@ -35,8 +35,8 @@ class Track:
 
     offset_hz : float64, (channels, hops): frequency followed, less the channel's nominal frequency.
     phase_cycles : float64, (channels, hops): the phase taken out, at the hop's middle, continuous (not wrapped).
-    amplitude : float64, (channels, hops): the carrier's amplitude, full scale 1.0; 0 where no carrier is followed. Where
-        a power of the signal is followed it is the root of that power's line, in amplitude units of the signal.
+    amplitude : float64, (channels, hops): the carrier's amplitude, full scale 1.0; 0 where no carrier is followed.
+        Where a power of the signal is followed it is the root of that power's line, in amplitude units of the signal.
     noise_density : float64, (channels, hops): noise power per hertz about the carrier, full scale squared per hertz.
     lock : int8, (channels, hops): values of :class:`Lock`.
     """

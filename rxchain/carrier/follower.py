@@ -1,0 +1,301 @@
+"""Follow the carriers of a group of channels, and turn each channel upright.
+
+::
+
+    samples -> [message band, power] -> block sums at each channel's frequency, every 5.3 ms
+            -> acquisition         spectra along straight drifts, for channels that follow nothing
+            -> frequency filter    phase, frequency, drift; carries on through fades and pauses
+            -> window contest      fixed-lag smoothing of the block sums, turned by the integral of that frequency
+            -> phase hold, lock watch, motion watch
+            -> derotation
+
+Feed-forward throughout: the phase taken out is read from samples before and after the one it is taken from, 128 ms to
+each side where the noise asks for it. Nothing is fed back to the input, so there is no pull-in, and no cycle slips.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Protocol
+
+import numpy as np
+
+from rxchain.carrier.acquisition import EVERY_HOPS, SPECTRUM_HOPS, Acquisition, Found
+from rxchain.carrier.block_sums import BlockSums
+from rxchain.carrier.derotation import derotate
+from rxchain.carrier.fading import MotionWatch
+from rxchain.carrier.frequency_filter import FrequencyFilter, unit_phasor
+from rxchain.carrier.history import History
+from rxchain.carrier.hops import HOPS_A_QUANTUM, LIVE_LOOK_AHEAD_HOPS, LOOK_AHEAD_HOPS, hop_samples
+from rxchain.carrier.line_choice import LineChoice
+from rxchain.carrier.lock_watch import LockWatch
+from rxchain.carrier.message_band import MessageBand
+from rxchain.carrier.nominal import NominalFollower
+from rxchain.carrier.phase_hold import PhaseHold
+from rxchain.carrier.power_law import line_amplitude, line_signal, signal_noise_density
+from rxchain.carrier.quadrature_noise import QuadratureNoise
+from rxchain.carrier.settings import RECIPES, FollowerSettings
+from rxchain.carrier.track import Follow, Lock, Track, Turned
+from rxchain.carrier.window_contest import Smoothed, WindowContest
+from rxchain.errors import SettingError
+from rxchain.streams import ComplexBlock, Floats
+
+__all__ = ["CarrierFollower", "Follower", "FollowerSettings", "NominalFollower", "make_follower"]
+
+_LINE_HOPS = 48  # kept of the line's signal: a spectrum, and what the look-ahead is made again from
+_PHASE_HOPS = 12  # a new line's phase is the mean of so many block sums
+_LEVEL_GAIN = 0.02  # a quantum: memory of the line's level, 1 s
+
+
+class Follower(Protocol):
+    """What all followers do; the stream conventions of :mod:`rxchain.streams` hold."""
+
+    hop_samples: int
+    delay_samples: int
+
+    def process(self, iq: ComplexBlock) -> Turned:
+        """Hops that have become complete."""
+        ...
+
+    def flush(self) -> Turned:
+        """The rest; the last hop may be short. The follower is as new afterwards."""
+        ...
+
+    def reset(self) -> None:
+        """As new, with the same settings."""
+        ...
+
+
+def make_follower(
+    settings: FollowerSettings,
+    n_channels: int,
+    rate_hz: float,
+    sides: Sequence[int] | None = None,
+    shift_hz: Floats | None = None,
+) -> Follower:
+    """The follower for the settings; ``shift_hz`` is for followers of the nominal frequency only."""
+    if settings.follow is Follow.NOMINAL:
+        return NominalFollower(n_channels, rate_hz, shift_hz)
+    if shift_hz is not None:
+        raise SettingError("shift_hz", shift_hz, "a shift needs follow=nominal", "leave it out")
+    return CarrierFollower(settings, n_channels, rate_hz, sides)
+
+
+class CarrierFollower:
+    """Follows one line a channel.
+
+    settings : what to follow; not :attr:`Follow.NOMINAL`.
+    rate_hz : sample rate of the channels.
+    sides : for pilots, where each channel's message lies: +1 above the carrier, -1 below, 0 both; default all 0.
+
+    hop_samples : samples a hop. delay_samples : how far the output may run behind the input, at most.
+
+    A channel counts as followed from the first hop at which its line is confirmed; until then, and after it is lost,
+    its samples pass with a constant phase. At a carrier's appearance the hops still in the look-ahead are turned right
+    from the first locked one.
+    """
+
+    def __init__(
+        self, settings: FollowerSettings, n_channels: int, rate_hz: float, sides: Sequence[int] | None = None
+    ) -> None:
+        if settings.follow is Follow.NOMINAL:
+            raise SettingError("follow", "nominal", "there is nothing to follow", "use make_follower")
+        sides = tuple(sides) if sides is not None else (0,) * n_channels
+        if len(sides) != n_channels:
+            raise SettingError("sides", sides, f"one side for each of {n_channels} channels")
+        self.settings = settings
+        self._n_channels, self._rate_hz, self._sides = n_channels, rate_hz, sides
+        self._recipe = RECIPES[settings.follow]
+        self.hop_samples = hop_samples(rate_hz)
+        self._hop_s = self.hop_samples / rate_hz
+        self._quantum = HOPS_A_QUANTUM * self.hop_samples
+        self._look_hops = LIVE_LOOK_AHEAD_HOPS if settings.live else LOOK_AHEAD_HOPS
+        # What the message band and half a block sum take of the look-ahead is lost to the smoother.
+        self._band_hops = 0 if self._recipe.power == 1 else 1
+        self._lag = self._look_hops - self._band_hops - self._recipe.span_hops // 2
+        self.delay_samples = self._look_hops * self.hop_samples + self._quantum - 1
+        self.reset()
+
+    def reset(self) -> None:
+        """As new, with the same settings."""
+        recipe, n, hop_s, quantum = self._recipe, self._n_channels, self._hop_s, HOPS_A_QUANTUM
+        self._waiting: ComplexBlock = np.zeros((n, 0), np.complex64)
+        self._quanta = 0
+        self._taken_in = self._delivered = 0
+        self._sums = BlockSums(n, self._rate_hz, self.hop_samples, recipe.span_hops)
+        choice = LineChoice(
+            self.settings.follow, recipe.power * self.settings.search_hz, self.settings.message_hz, self._sides
+        )
+        self._acquisition = Acquisition(n, self._rate_hz, self.hop_samples, recipe, choice)
+        self._filter = FrequencyFilter(n, hop_s)
+        self._contest = WindowContest(n, recipe.half_lengths, self._lag, quantum, hop_s, self._sums.overlap_correlation)
+        self._noise = QuadratureNoise(n, recipe.span_hops, quantum, hop_s, recipe.hold_s)
+        self._hold = PhaseHold(n, recipe.hold_weight)
+        self._watch = LockWatch(n, self._lag, quantum, hop_s, recipe.confirm_s)
+        self._motion = MotionWatch(n, quantum, hop_s, recipe.fast_fading)
+        self._band = MessageBand(
+            n, self._rate_hz, self.hop_samples, quantum, self.settings.message_hz[1], self.settings.search_hz
+        )
+        line_hops = _LINE_HOPS if recipe.power > 1 else max(_LINE_HOPS, self._look_hops + quantum)
+        self._samples = History((n,), max(line_hops, self._look_hops + quantum) * self.hop_samples, np.complex64)
+        self._line = self._samples if recipe.power == 1 else History((n,), line_hops * self.hop_samples, np.complex64)
+        self._blocks = History((2, n), self._contest.length, np.float32)
+        self._reference = History((n,), self._lag + quantum + 1, np.float64)
+        self._used_hz = History((n,), self._lag + quantum, np.float64)
+        self._last_edge: Floats = np.zeros(n)
+        self._level: Floats = np.zeros(n)
+
+    def process(self, iq: ComplexBlock) -> Turned:
+        """Take in samples ``(n_channels, n)``, complex64; whole hops come out as they become known."""
+        if iq.ndim != 2 or iq.shape[0] != self._n_channels:
+            raise SettingError("iq", iq.shape, f"samples have the shape ({self._n_channels}, n)")
+        self._taken_in += iq.shape[1]
+        samples = np.concatenate([self._waiting, iq], axis=1) if self._waiting.shape[1] else iq
+        whole = samples.shape[1] // self._quantum * self._quantum
+        pieces = [self._advance(samples[:, k : k + self._quantum]) for k in range(0, whole, self._quantum)]
+        self._waiting = samples[:, whole:].astype(np.complex64)
+        turned = self._join([piece for piece in pieces if piece is not None])
+        self._delivered += turned.iq.shape[1]
+        return turned
+
+    def flush(self) -> Turned:
+        """What is still on the way; as much has then come out as went in, and the follower is as new."""
+        missing = self._taken_in - self._delivered
+        silence = -(-missing // self._quantum) * self._quantum + self._look_hops * self.hop_samples
+        short = self._waiting.shape[1]
+        silence += -(short + silence) % self._quantum
+        turned = self.process(np.zeros((self._n_channels, silence), np.complex64))
+        self.reset()
+        hops = -(-missing // self.hop_samples)
+        return Turned(turned.iq[:, :missing], _first_hops(turned.track, hops), self.hop_samples)
+
+    def _advance(self, block: ComplexBlock) -> Turned | None:
+        recipe, hop = self._recipe, self.hop_samples
+        self._quanta += 1
+        self._samples.push(block)
+        if recipe.power > 1:
+            known = self._watch.active & self._watch.confirmed
+            self._band.retune(self._filter.frequency_hz / recipe.power, known)
+            banded = self._band.filter(self._samples.latest(self._band.length))
+            self._line.push(line_signal(banded, recipe.power))
+        hops = self._quanta * HOPS_A_QUANTUM
+        if hops >= SPECTRUM_HOPS and hops % EVERY_HOPS == 0 and not self._watch.confirmed.all():
+            searching = ~(self._watch.active & self._watch.confirmed)
+            for found in self._acquisition.search(
+                self._line.latest(self._acquisition.length), searching, ~self._watch.active
+            ):
+                self._take_up(found)
+        self._sums.retune(self._filter.frequency_hz)
+        sums = self._sums.sums(self._line.latest(self._quantum + (recipe.span_hops - 1) * hop))
+        self._push_blocks(sums)
+        smoothed = self._contest.smooth(
+            self._blocks.latest(self._contest.length), self._noise.power, self._watch.followed_s
+        )
+        return self._turn(smoothed)
+
+    def _push_blocks(self, sums: ComplexBlock) -> None:
+        used_hz = self._filter.follow(
+            sums.astype(np.complex128), self._noise.held, self._watch.active, self._motion.fast, self._motion.lag_hz
+        )
+        # The blocks are turned by the integral of the frequency: the filter's phase takes kicks, which would stay.
+        reference = self._reference.latest(1) + np.cumsum(used_hz, axis=1) * self._hop_s
+        self._used_hz.push(used_hz)
+        self._reference.push(reference)
+        turned = sums * unit_phasor(-reference)
+        self._blocks.push(np.stack([turned.real, turned.imag]).astype(np.float32))
+
+    def _take_up(self, found: Found) -> None:
+        """Follow a new line, and make the look-ahead again at its frequency, so that it is turned right."""
+        channel, hop_s = found.channel, self._hop_s
+        hops_ago = HOPS_A_QUANTUM + self._recipe.span_hops // 2
+        line_hz = found.line_hz - found.drift_hz_s * hops_ago * hop_s
+        self._filter.start(channel, 0.0, line_hz, found.drift_hz_s, 0.0)
+        self._sums.retune(self._filter.frequency_hz)
+        samples = self._line.latest(_LINE_HOPS * self.hop_samples - self._quantum, ago=self._quantum)
+        sums = self._sums.sums_of(channel, samples[channel])
+        back_s = np.arange(self._contest.length - 1, -1, -1) * hop_s
+        newest = float(self._reference.latest(1)[channel, 0])
+        reference = newest - line_hz * back_s + 0.5 * found.drift_hz_s * back_s**2
+        turned = sums * unit_phasor(-reference[-len(sums) :])
+        blocks = self._blocks.latest(self._contest.length)[:, channel]
+        blocks[...] = 0.0
+        blocks[0, -len(sums) :], blocks[1, -len(sums) :] = turned.real, turned.imag
+        edges = self._reference.latest(self._lag + HOPS_A_QUANTUM + 1)[channel]
+        edges[...] = reference[-len(edges) :]
+        used_hz = self._used_hz.latest(self._lag + HOPS_A_QUANTUM)[channel]
+        used_hz[...] = line_hz - found.drift_hz_s * (back_s[-len(used_hz) :] + 0.5 * hop_s)
+        mean = np.mean(turned[-_PHASE_HOPS:])
+        phase = newest + float(np.angle(mean)) / (2.0 * np.pi)
+        self._filter.start(channel, phase, line_hz, found.drift_hz_s, float(np.abs(mean)))
+        self._noise.start(channel, found.noise_density * self._sums.noise_bandwidth_hz)
+        for part in (self._contest, self._hold, self._watch, self._motion):
+            part.start(channel)
+        self._level[channel] = float(np.abs(mean))
+
+    def _turn(self, smoothed: Smoothed) -> Turned | None:
+        hops, power = HOPS_A_QUANTUM, self._recipe.power
+        self._noise.measure(smoothed.quadrature, smoothed.present, self._watch.followed_s)
+        before, cycles = self._hold.hold(smoothed.line, np.sqrt(smoothed.noise_share * self._noise.held))
+        squared = smoothed.line.real**2 + smoothed.line.imag**2
+        noise_power = smoothed.noise_share * self._noise.power
+        given_up = self._watch.judge(squared.mean(axis=1), noise_power)
+        narrow_noise = self._contest.narrow_share * self._noise.power
+        shift = self._motion.watch(smoothed.line, smoothed.narrow, narrow_noise, self._watch.locked)
+        if shift.any():
+            self._filter.shift(shift, self._motion.lag_hz)
+        if given_up.any():
+            self._filter.stop(given_up)
+            self._acquisition.forget(given_up)
+        lock = self._watch.lock
+        shown = (lock != Lock.NONE)[:, None]
+        reference = self._reference.latest(hops + 1, ago=self._lag)
+        edges = (reference + np.concatenate([before[:, None], cycles], axis=1)) / power
+        edges = np.where(shown, edges, self._last_edge[:, None])
+        self._last_edge = edges[:, -1].copy()
+        line = np.sqrt(np.maximum(squared - noise_power[:, None], 0.0))
+        self._level += np.where(self._watch.locked, _LEVEL_GAIN, 0.0) * (line.mean(axis=1) - self._level)
+        if self._quanta * hops <= self._look_hops:
+            return None
+        density = signal_noise_density(
+            self._noise.power / self._sums.noise_bandwidth_hz,
+            np.where(shown[:, 0], self._level, 0.0),
+            power,
+            self._band.bandwidth_hz,
+        )
+        track = Track(
+            offset_hz=np.where(shown, self._used_hz.latest(hops, ago=self._lag) / power, 0.0),
+            phase_cycles=0.5 * (edges[:, 1:] + edges[:, :-1]),
+            amplitude=np.where(shown, line_amplitude(line, power), 0.0),
+            noise_density=np.repeat(density[:, None], hops, axis=1),
+            lock=np.repeat(lock[:, None], hops, axis=1),
+        )
+        oldest = self._samples.latest(self._quantum, ago=self._look_hops * self.hop_samples)
+        return Turned(derotate(oldest, edges), track, self.hop_samples)
+
+    def _join(self, pieces: list[Turned]) -> Turned:
+        n, hop = self._n_channels, self.hop_samples
+        if len(pieces) == 1:
+            return pieces[0]
+        if not pieces:
+            nothing = np.zeros((n, 0))
+            track = Track(nothing, nothing, nothing, nothing, np.zeros((n, 0), np.int8))
+            return Turned(np.zeros((n, 0), np.complex64), track, hop)
+        tracks = [piece.track for piece in pieces]
+        track = Track(
+            offset_hz=np.concatenate([t.offset_hz for t in tracks], axis=1),
+            phase_cycles=np.concatenate([t.phase_cycles for t in tracks], axis=1),
+            amplitude=np.concatenate([t.amplitude for t in tracks], axis=1),
+            noise_density=np.concatenate([t.noise_density for t in tracks], axis=1),
+            lock=np.concatenate([t.lock for t in tracks], axis=1),
+        )
+        return Turned(np.concatenate([piece.iq for piece in pieces], axis=1), track, hop)
+
+
+def _first_hops(track: Track, hops: int) -> Track:
+    return Track(
+        offset_hz=track.offset_hz[:, :hops],
+        phase_cycles=track.phase_cycles[:, :hops],
+        amplitude=track.amplitude[:, :hops],
+        noise_density=track.noise_density[:, :hops],
+        lock=track.lock[:, :hops],
+    )
