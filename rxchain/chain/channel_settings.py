@@ -225,7 +225,7 @@ def _check_slope(value: str, channel: ChannelSettings) -> None:
 
 
 def _check_align(value: str, channel: ChannelSettings) -> None:
-    if value != OFF and channel.emission.family not in ("J3E", "B8E"):
+    if value != OFF and channel.emission.family != "J3E":
         raise SettingError("align", value, f"{channel.emission.name} is not tuned by hand", "leave it out")
 
 

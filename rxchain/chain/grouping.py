@@ -11,6 +11,7 @@ from rxchain.tuning.plan import BankPlan
 
 # What a channel needs beyond its message's upper edge: the slope of its filters and some mistuning.
 _MARGIN_HZ = 150.0
+_ANY_MESSAGE_HZ = (300.0, 2700.0)  # for followers that do not look at it, so that their groups are not kept apart
 _FOLLOW = {
     Reference.CARRIER: Follow.CARRIER,
     Reference.PILOT: Follow.PILOT,
@@ -48,7 +49,7 @@ def kind_of(channel: ChannelSettings, plan: BankPlan) -> GroupKind:
         follow=follow,
         fourth_power=emission.reference is Reference.PILOT_OR_FOURTH_POWER,
         live=channel.delay == "live",
-        message_hz=(0.0, 0.0) if follow in (Follow.NOMINAL, Follow.CARRIER) else _followed_band(channel),
+        message_hz=_ANY_MESSAGE_HZ if follow in (Follow.NOMINAL, Follow.CARRIER) else _followed_band(channel),
         stereo=emission.family == "AM-STEREO",
         n_messages=len(emission.messages),
         candidates=candidates_of(channel),

@@ -1,1 +1,1 @@
-"""."""
+"""Where audio and results go: files."""

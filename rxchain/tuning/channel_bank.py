@@ -50,6 +50,7 @@ class ChannelBank:
     def reset(self) -> None:
         """As new: time starts again at 0."""
         self._pending[:] = 0
+        self._spectrum[:] = 0
         self._filled = self.plan.overlap
         self._hops = 0
         self._received = 0
@@ -85,6 +86,15 @@ class ChannelBank:
                 self._delivered[k] -= surplus
         self._received = received
         return [np.concatenate(blocks, axis=1) for blocks in tails]
+
+    def mean_spectrum(self, n_bins: int) -> Floats:
+        """Mean power over the latest batch in ``n_bins`` equal parts of the capture, lowest frequency first.
+
+        float64, (n_bins,), linear: a full-scale complex tone adds 1 to the part it lies in.
+        """
+        power = np.mean(np.abs(self._spectrum[:, : self.plan.length].astype(np.complex128)) ** 2, axis=0)
+        edges = np.arange(n_bins) * self.plan.length // n_bins
+        return np.asarray(np.add.reduceat(np.fft.fftshift(power), edges) / self.plan.length**2)
 
     def _transform(self) -> list[ComplexBlock]:
         plan = self.plan

@@ -1,0 +1,80 @@
+"""From detected messages to audio as delivered: gain, gate, and the rate that files want."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+
+import numpy as np
+
+from rxchain.audio.gain_control import GainControl, GainSettings
+from rxchain.audio.rate_conversion import RateConverter
+from rxchain.audio.squelch import Gate
+from rxchain.chain.channel_settings import AUTO, OFF, AutoOrLevel, ChannelSettings
+from rxchain.streams import Bools, FloatBlock, Floats
+
+_LEVEL_MEMORY_S = 0.3
+
+
+class AudioPath:
+    """Gain control, squelch gate and rate conversion of a group of channels.
+
+    process(audio, open_steps) : float32, (channels, messages, n) and the squelch's decisions. Returns audio at
+        ``rate_hz``; with ``agc=off`` and ``squelch=off`` it is the detected message times exactly 1.
+    """
+
+    def __init__(
+        self, channels: Sequence[ChannelSettings], n_messages: int, squelch_step: int, channel_rate_hz: float
+    ) -> None:
+        n = len(channels)
+        fixed_db = np.array([fixed_gain_db(channel.agc_db) for channel in channels])
+        always = np.array([channel.squelch_db == OFF for channel in channels])
+        self.is_automatic: Bools = np.isnan(fixed_db)
+        self._gain = GainControl(GainSettings(), fixed_db, n_messages, channel_rate_hz)
+        self._gate = Gate(n, n_messages, squelch_step, channel_rate_hz, always)
+        self.rate_hz = delivered_rate_hz(channel_rate_hz)
+        self._converter = (
+            None if self.rate_hz == channel_rate_hz else RateConverter(n, n_messages, channel_rate_hz, self.rate_hz)
+        )
+        self._power = np.zeros((n, n_messages))
+        self.delay_samples = self._gain.delay_samples + (self._converter.delay_samples if self._converter else 0)
+
+    @property
+    def gain_db(self) -> Floats:
+        """Gain in force, (channels,)."""
+        return self._gain.gain_db
+
+    @property
+    def level_dbfs(self) -> Floats:
+        """Level of the delivered audio over the last moments, (channels, messages)."""
+        return np.asarray(10.0 * np.log10(np.maximum(self._power, 1e-20)))
+
+    def process(self, audio: FloatBlock, open_steps: Bools) -> FloatBlock:
+        """Delivered audio as far as it is complete."""
+        return self._deliver(self._gate.process(self._gain.process(audio), open_steps))
+
+    def flush(self, open_steps: Bools) -> FloatBlock:
+        """The tail."""
+        tail = self._deliver(self._gate.process(self._gain.flush(), open_steps))
+        return tail if self._converter is None else np.concatenate([tail, self._converter.flush()], axis=2)
+
+    def _deliver(self, audio: FloatBlock) -> FloatBlock:
+        n = audio.shape[2]
+        if n:
+            weight = np.exp(-n / (_LEVEL_MEMORY_S * self.rate_hz))
+            self._power = weight * self._power + (1 - weight) * np.mean(np.square(audio), axis=2)
+        return audio if self._converter is None else self._converter.process(audio)
+
+
+def fixed_gain_db(agc: AutoOrLevel) -> float:
+    """The gain of a channel whose gain is fixed, nan where it is automatic."""
+    if agc == AUTO:
+        return float("nan")
+    return 0.0 if agc == OFF else float(agc)
+
+
+def delivered_rate_hz(channel_rate_hz: float) -> float:
+    """The channel's own rate where that is a whole number, else the whole number of kilohertz below it."""
+    if float(channel_rate_hz).is_integer():
+        return channel_rate_hz
+    return max(1_000.0, 1_000.0 * math.floor(channel_rate_hz / 1_000.0))

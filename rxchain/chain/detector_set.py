@@ -1,0 +1,110 @@
+"""The detectors a group runs, and which of them each channel is heard through."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import numpy as np
+
+from rxchain.carrier.track import Follow, Turned
+from rxchain.chain.channel_settings import AUTO, ChannelSettings
+from rxchain.chain.detector_taps import coherent_taps, envelope_band, message_taps
+from rxchain.chain.grouping import GroupKind
+from rxchain.detectors.coherent import CoherentDetector
+from rxchain.detectors.envelope import RECTIFIER_GAIN, EnvelopeDetector
+from rxchain.detectors.picker import DetectorPicker, PickedChannel
+from rxchain.detectors.switch import DetectorSwitch
+from rxchain.kernels.fir import ComplexTaps, centred
+from rxchain.streams import ComplexBlock, FloatBlock
+
+# Emissions whose envelope is not that of a plain double sideband need more room before theirs is filtered.
+_OVERSAMPLING, _OVERSAMPLING_SIDED = 2, 4
+
+
+class DetectorSet:
+    """All detectors of a group, the picker between them where there is a choice, and the switch that carries it out."""
+
+    def __init__(self, kind: GroupKind, channels: Sequence[ChannelSettings], rate_hz: float, usable_hz: float) -> None:
+        self._kind = kind
+        self._channels = channels
+        self._names = kind.candidates
+        self._detectors = [_detector(name, channels, rate_hz) for name in self._names]
+        self.delay_samples = max(detector.delay_samples for detector in self._detectors)
+        self._picker: DetectorPicker | None = None
+        self._served = np.zeros((len(channels), len(self._names)), np.int64)
+        self._reasons = [[""] * len(self._names) for _ in channels]
+        if len(self._names) > 1:
+            picked = [PickedChannel(c.emission, c.audio_hz, c.vestige_hz, self._names) for c in channels]
+            self._picker = DetectorPicker(picked, rate_hz, usable_hz)
+            self._switch = DetectorSwitch(
+                len(channels), kind.n_messages, len(self._names), self._picker.step_samples, rate_hz
+            )
+
+    def process(self, turned: Turned, upright: ComplexBlock) -> FloatBlock:
+        """The chosen audio, (channels, messages, n), as far as it is complete."""
+        audio = [self._run(k, detector.process(upright)) for k, detector in enumerate(self._detectors)]
+        if self._picker is None:
+            return audio[0]
+        choices = self._picker.process(turned).candidate
+        for step in choices.T:
+            self._served[np.arange(len(step)), step] += 1
+        if choices.shape[1]:
+            for row, (reason, chosen) in enumerate(zip(self._picker.reasons(), choices[:, -1], strict=True)):
+                self._reasons[row][chosen] = reason
+        return self._switch.process(audio, choices)
+
+    def flush(self) -> FloatBlock:
+        """The tail."""
+        audio = [self._run(k, detector.flush()) for k, detector in enumerate(self._detectors)]
+        if self._picker is None:
+            return audio[0]
+        return self._switch.process(audio, np.zeros((len(self._channels), 0), np.int8))
+
+    def in_words(self, row: int, was_locked: bool) -> tuple[str, str]:
+        """The detector that served a channel most, and the reason it last gave."""
+        channel = self._channels[row]
+        if self._picker is None:
+            name = self._names[0]
+            asked = channel.detector != AUTO and len(channel.emission.detectors) > 1
+            return name, "asked for" if asked else self._only_way(channel, was_locked)
+        chosen = int(np.argmax(self._served[row]))
+        name = self._names[chosen]
+        return ("coherent" if name in ("upper", "lower") else name), self._reasons[row][chosen]
+
+    def _run(self, place: int, audio: FloatBlock) -> FloatBlock:
+        return audio * RECTIFIER_GAIN if self._names[place] == "rectifier" else audio
+
+    def _only_way(self, channel: ChannelSettings, was_locked: bool) -> str:
+        nominal = "beat against the nominal frequency"
+        if channel.emission.family == "A1A":
+            return f"keyed carrier: beat note at {channel.beat_hz:g} Hz"
+        match self._kind.follow:
+            case Follow.NOMINAL:
+                shifted = f", shifted by {channel.align_hz:+g} Hz" if channel.align_hz else ""
+                return f"no carrier to follow: {nominal}{shifted}"
+            case Follow.PILOT if was_locked:
+                return "the message lies beside a carrier: locked to it"
+            case Follow.PILOT:
+                return f"no pilot found: {nominal}"
+            case Follow.SQUARE if was_locked:
+                return "no carrier sent: followed by the line of the squared signal"
+            case Follow.SQUARE:
+                return f"no carrier sent and no mirrored sidebands found: {nominal}"
+            case _ if was_locked:
+                return "locked to the carrier"
+        return f"no carrier found: {nominal}"
+
+
+def _detector(name: str, channels: Sequence[ChannelSettings], rate_hz: float) -> CoherentDetector | EnvelopeDetector:
+    if name in ("envelope", "rectifier"):
+        sided = any(channel.emission.side is not None for channel in channels)
+        return EnvelopeDetector(
+            [envelope_band(channel, rate_hz) for channel in channels],
+            [message_taps(channel, rate_hz) for channel in channels],
+            _OVERSAMPLING_SIDED if sided else _OVERSAMPLING,
+        )
+    sideband = name if name in ("upper", "lower") else None
+    filters: list[list[ComplexTaps]] = [coherent_taps(channel, rate_hz, sideband) for channel in channels]
+    longest = max(len(taps) for filters_of in filters for taps in filters_of)
+    taps = np.array([[centred(taps, longest) for taps in filters_of] for filters_of in filters])
+    return CoherentDetector(taps, len(channels))

@@ -1,0 +1,62 @@
+"""``rxchain receive SOURCE``: receives every channel at once, and leaves audio and a summary."""
+
+from __future__ import annotations
+
+import argparse
+
+_EXAMPLES = """\
+examples:
+  rxchain receive coast.sigmf-meta --channel "7.1MHz J3E-LSB name=net" --out heard
+  rxchain receive station.toml --out heard
+  rxchain receive band.cu8 --rate 2.4MHz --centre 118.5MHz --channel "118.1MHz A3E"
+
+A channel is FREQUENCY EMISSION [key=value ...]; the keys are those of a [[channel]] table:
+name, audio, detector, sideband, delay, align, beat, vestige, slope, transmit_response, agc, squelch."""
+
+
+def add_arguments(parser: argparse.ArgumentParser) -> None:
+    """The command's arguments."""
+    parser.formatter_class = argparse.RawDescriptionHelpFormatter
+    parser.epilog = _EXAMPLES
+    parser.add_argument(
+        "source",
+        metavar="SOURCE",
+        help="a station file (.toml), a SigMF recording, a two-channel WAV, RF64 or FLAC file, "
+        "a raw file (.cu8 .cs8 .cs16 .cf32), or rtlsdr[:serial]",
+    )
+    parser.add_argument("--channel", action="append", default=[], metavar="TEXT", help="adds a channel; may be repeated")
+    parser.add_argument("--out", metavar="DIR", help="folder for audio and summary.json; made if it is not there")
+    parser.add_argument(
+        "--pace", choices=("live", "fast"), default="fast", help="recordings at their own pace, or as fast as it goes"
+    )
+    parser.add_argument("--quiet", action="store_true", help="show nothing while receiving")
+    parser.add_argument("--rate", metavar="FREQUENCY", help="samples a second, of a raw file or the receiver")
+    parser.add_argument("--centre", metavar="FREQUENCY", help="frequency at the middle, of a file that doesn't say, or to tune to")
+    parser.add_argument("--capture", metavar="N", help="which capture of a recording whose captures lie at different frequencies")
+    parser.add_argument("--gain", metavar="DB", help="receiver's gain in dB; auto (its own) if left out")
+    parser.add_argument("--ppm", metavar="N", help="receiver's frequency correction, parts per million")
+    parser.add_argument("--direct-sampling", choices=("i", "q"), metavar="i|q", help="receiver's input that bypasses the tuner")
+
+
+def run(arguments: argparse.Namespace) -> int:
+    """Receives; returns the exit status."""
+    from pathlib import Path
+
+    from rxchain.chain.channel_settings import channel_from_text
+    from rxchain.chain.station import load_station
+    from rxchain.cli.reception import Request, receive
+
+    channels = tuple(channel_from_text(text) for text in arguments.channel)
+    options = {
+        key: value
+        for key in ("rate", "centre", "capture", "gain", "ppm", "direct_sampling")
+        if (value := getattr(arguments, key)) is not None
+    }
+    source = arguments.source
+    if source.lower().endswith(".toml"):
+        station = load_station(Path(source))
+        source, options = station.source, station.source_options | options
+        channels = station.channels + channels
+    out = Path(arguments.out) if arguments.out else None
+    request = Request(source, options, channels, out, live_pace=arguments.pace == "live", quiet=arguments.quiet)
+    return receive(request).exit_status

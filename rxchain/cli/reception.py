@@ -1,0 +1,141 @@
+"""One reception from request to result: what ``receive`` and ``demo`` have in common."""
+
+from __future__ import annotations
+
+import os
+import signal
+import sys
+import threading
+import time
+from collections.abc import Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass
+from pathlib import Path
+from types import FrameType
+
+# Small matrix products gain nothing from threads, and threads cost the numeric one its quiet.
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+
+import numpy as np
+
+from rxchain.chain.channel_settings import ChannelSettings
+from rxchain.chain.receiver import Receiver
+from rxchain.chain.runner import Runner, span_text
+from rxchain.chain.station import check_names
+from rxchain.cli.main import one_line
+from rxchain.dashboard.display import Display, make_display
+from rxchain.errors import FaultError, SettingError
+from rxchain.sinks.audio_folder import AudioFolder, NoAudio
+from rxchain.sources.opening import open_source
+from rxchain.sources.pacing import Paced
+from rxchain.units import parse_frequency_hz
+
+
+@dataclass(frozen=True, slots=True)
+class Request:
+    """What to receive, and what to do with it. ``options`` : the source's further keys, as written."""
+
+    source: str
+    options: dict[str, str]
+    channels: tuple[ChannelSettings, ...]
+    out: Path | None
+    live_pace: bool
+    quiet: bool
+
+
+@dataclass(frozen=True, slots=True)
+class Result:
+    """The receiver after its run, with all its figures, and the exit status that follows."""
+
+    receiver: Receiver
+    exit_status: int
+
+
+def receive(request: Request) -> Result:
+    """Carries out a request; raises :class:`~rxchain.errors.RequestError` before anything has started."""
+    if not request.channels:
+        raise SettingError("channel", "(none)", "there is nothing to receive", "add --channel 'FREQUENCY EMISSION'")
+    check_names(request.channels)
+    _lift_allocation_threshold()
+    source = open_source(request.source, **_source_options(request.options))
+    is_live = source.info.n_samples is None
+    stop = threading.Event()
+    if request.live_pace and not is_live:
+        source = Paced(source, time.monotonic, lambda seconds: stop.wait(seconds))
+    try:
+        receiver = Receiver(source.info, request.channels)
+        sink = AudioFolder(request.out, receiver) if request.out else NoAudio()
+    except BaseException:
+        source.close()
+        raise
+    if is_live or request.live_pace:
+        sys.setswitchinterval(1e-4)  # the display must not hold the numeric thread up for 5 ms at a time
+    display: Display = make_display(quiet=request.quiet)
+    late = (lambda: source.late_blocks) if isinstance(source, Paced) else (lambda: 0)
+    runner = Runner(source, receiver, sink, time.monotonic, display.show if display.wants_status else None, late)
+
+    def stop_all() -> None:
+        stop.set()
+        runner.stop()
+
+    with _stopped_by_signals(stop_all), display.running(stop_all):
+        outcome = runner.run()
+    fault = outcome.fault
+    try:
+        sink.close()
+    except FaultError as error:
+        fault = fault or error
+    if fault is not None:
+        print(f"rxchain: {one_line(str(fault))}; {span_text(receiver)}, and that is kept", file=sys.stderr)
+        return Result(receiver, fault.exit_status)
+    return Result(receiver, 130 if outcome.stopped else 0)
+
+
+def _source_options(options: dict[str, str]) -> dict[str, object]:
+    """The source's keys as numbers."""
+    parsed: dict[str, object] = {}
+    for key in ("rate", "centre"):
+        if key in options:
+            parsed[f"{key}_hz"] = parse_frequency_hz(options[key], key)
+    for key in ("capture", "ppm"):
+        if key in options:
+            try:
+                parsed[key] = int(options[key])
+            except ValueError:
+                raise SettingError(key, options[key], "must be a whole number") from None
+    if options.get("gain", "auto") != "auto":
+        try:
+            parsed["gain_db"] = float(options["gain"].removesuffix("dB"))
+        except ValueError:
+            raise SettingError("gain", options["gain"], "must be auto or a number of dB") from None
+    if "direct_sampling" in options:
+        parsed["direct_sampling"] = options["direct_sampling"]
+    return parsed
+
+
+@contextmanager
+def _stopped_by_signals(stop: object) -> Iterator[None]:
+    """The first interrupt or termination asks the run to end, a second interrupt breaks it off."""
+    previous = {}
+
+    def on_signal(number: int, _: FrameType | None) -> None:
+        signal.signal(number, previous[number])
+        stop()  # type: ignore[operator]
+
+    if threading.current_thread() is threading.main_thread():
+        for number in (signal.SIGINT, signal.SIGTERM):
+            previous[number] = signal.signal(number, on_signal)
+    try:
+        yield
+    finally:
+        for number, handler in previous.items():
+            signal.signal(number, handler)
+
+
+def _lift_allocation_threshold() -> None:
+    """Frees one large block, after which the C library keeps memory of that size instead of returning it each time.
+
+    Without it every transform's buffers are mapped and unmapped anew, which costs as much as the transform.
+    """
+    del_me = np.empty(30 << 20, np.uint8)
+    del del_me
