@@ -42,8 +42,8 @@ class Squelch:
         n = len(in_band_hz)
         frequency_hz = scipy.fft.fftfreq(self._frame, 1.0 / rate_hz)
         usable = np.abs(frequency_hz) <= usable_hz
-        self._inside = np.zeros((n, self._frame), np.float64)
-        self._outside = np.zeros((n, self._frame), np.float64)
+        self._inside = np.zeros((n, self._frame), np.float32)
+        self._outside = np.zeros((n, self._frame), np.float32)
         for row, bands in enumerate(in_band_hz):
             inside = np.zeros(self._frame, bool)
             near = np.zeros(self._frame, bool)
@@ -84,14 +84,18 @@ class Squelch:
 
     def _decide(self, window: ComplexBlock) -> Bools:
         spectrum = scipy.fft.fft(window * self._window, axis=1)
-        power: NDArray[np.float32] = spectrum.real**2 + spectrum.imag**2
-        self._recent[self._frames % _AVERAGED] = power
+        slot = self._recent[self._frames % _AVERAGED]
+        np.square(spectrum.real, out=slot)
+        slot += np.square(spectrum.imag)
         self._frames += 1
-        mean = self._recent.mean(axis=0, dtype=np.float64) + 1e-30
-        inside = (mean * self._inside).sum(axis=1)
-        outside = (mean * self._outside).sum(axis=1)
+        mean = self._recent[0] + self._recent[1]
+        mean += self._recent[2]
+        mean += self._recent[3]
+        mean += np.float32(1e-30)
+        inside = np.einsum("cf,cf->c", mean, self._inside).astype(np.float64)
+        outside = np.einsum("cf,cf->c", mean, self._outside).astype(np.float64)
         ratio_db = np.where(self._has_neighbourhood, 10.0 * np.log10(inside / (outside + 1e-30)), -np.inf)
-        uneven = np.log(inside) - (np.log(mean) * self._inside).sum(axis=1)
+        uneven = np.log(inside) - np.einsum("cf,cf->c", np.log(mean), self._inside)
         automatic = (ratio_db > RATIO_OPEN_DB) | (uneven > UNEVEN_OPEN)
         # The ratio is of signal and noise to noise; without a neighbourhood a set threshold cannot be judged.
         snr = np.where(self._has_neighbourhood, inside / (outside + 1e-30) - 1.0, np.inf)

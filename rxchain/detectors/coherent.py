@@ -26,18 +26,23 @@ class CoherentDetector(WindowedStage[np.complex64]):
     def __init__(self, taps: NDArray[np.complex128], n_channels: int, hop: int = 256) -> None:
         _, n_messages, n_taps = taps.shape
         length = next_smooth(n_taps - 1 + hop, multiple_of=2)
-        # Re(h * y) has the spectrum (H(f) Y(f) + conj(H(-f) Y(-f))) / 2, of which half the bins are enough.
         response = scipy.fft.fft(taps, length, axis=2)
         positive = np.arange(length // 2 + 1)
-        self._mirror = -positive % length
-        self._direct = (response[:, :, positive] / 2).astype(np.complex64)
-        self._mirrored = np.conj(response[:, :, self._mirror] / 2).astype(np.complex64)
+        self._direct = response[:, :, positive].astype(np.complex64)
+        self._mirrored: NDArray[np.complex64] | None = None
+        if np.iscomplexobj(taps) and np.any(taps.imag):
+            # Re(h * y) has the spectrum (H(f) Y(f) + conj(H(-f) Y(-f))) / 2, of which half the bins are enough.
+            self._mirror = -positive % length
+            self._direct /= 2
+            self._mirrored = np.conj(response[:, :, self._mirror] / 2).astype(np.complex64)
         self._set_up((n_channels,), np.complex64, length - hop, hop, n_taps // 2, (n_channels, n_messages))
 
     def _advance(self, window: ComplexBlock) -> FloatBlock:
-        spectrum = scipy.fft.fft(window, axis=1)[:, None, :]
-        n_positive = self._direct.shape[2]
-        half = self._direct * spectrum[:, :, :n_positive]
-        half += self._mirrored * np.conj(spectrum[:, :, self._mirror])
+        if self._mirrored is None:  # real taps: the imaginary part has no say
+            half = self._direct * scipy.fft.rfft(window.real, axis=1)[:, None, :]
+        else:
+            spectrum = scipy.fft.fft(window, axis=1)[:, None, :]
+            half = self._direct * spectrum[:, :, : self._direct.shape[2]]
+            half += self._mirrored * np.conj(spectrum[:, :, self._mirror])
         audio: FloatBlock = scipy.fft.irfft(half, window.shape[1], axis=2, overwrite_x=True)
         return audio[:, :, self._windows.overlap :]
