@@ -20,6 +20,7 @@ from rxchain.streams import Bools, ComplexBlock, Counts, Floats
 
 SPECTRUM_HOPS = 32
 EVERY_HOPS = 16
+_FINE_SIZE = 512
 _AROUND_HZ = 100.0
 _QUICK_FALL_DB = 3.0  # what a quick line may have gained since the spectrum before
 _LOG_MEAN_DB = 2.51  # mean power over mean log power of noise: Euler's constant in dB
@@ -34,6 +35,24 @@ class Found:
     line_hz: float
     drift_hz_s: float
     noise_density: float
+
+
+def residual_hz(blocks: ComplexBlock, hop_s: float) -> float:
+    """Frequency, within a spectrum's bin of zero, of a line whose block sums ``(hops,)`` were turned by what is known.
+
+    The peak of their spectrum: the maximum-likelihood estimate (D. C. Rife and R. R. Boorstyn, "Single-tone parameter
+    estimation from discrete-time observations", IEEE Trans. IT-20, 1974).
+    """
+    size = _FINE_SIZE
+    power = np.abs(np.fft.fft(blocks, size)) ** 2
+    reach = int(np.ceil(size / SPECTRUM_HOPS))
+    k = np.arange(-reach, reach + 1)
+    near = power[k]
+    peak = int(np.argmax(near[1:-1])) + 1
+    left, top, right = (float(v) for v in near[peak - 1 : peak + 2])
+    bend = left - 2.0 * top + right
+    step = float(np.clip(0.5 * (left - right) / bend, -0.5, 0.5)) if bend < 0.0 else 0.0
+    return (float(k[peak]) + step) / (size * hop_s)
 
 
 class Acquisition:

@@ -20,7 +20,7 @@ from typing import Protocol
 
 import numpy as np
 
-from rxchain.carrier.acquisition import EVERY_HOPS, SPECTRUM_HOPS, Acquisition, Found
+from rxchain.carrier.acquisition import EVERY_HOPS, SPECTRUM_HOPS, Acquisition, Found, residual_hz
 from rxchain.carrier.block_sums import BlockSums
 from rxchain.carrier.derotation import derotate
 from rxchain.carrier.fading import MotionWatch
@@ -89,6 +89,8 @@ class CarrierFollower:
     sides : for pilots, where each channel's message lies: +1 above the carrier, -1 below, 0 both; default all 0.
 
     hop_samples : samples a hop. delay_samples : how far the output may run behind the input, at most.
+    bandwidth_hz : float64, (n_channels,): one-sided noise bandwidth of the line's phase at the moment; the variance of
+        that phase is ``bandwidth_hz / (C/N0)`` rad^2.
 
     A channel counts as followed from the first hop at which its line is confirmed; until then, and after it is lost,
     its samples pass with a constant phase. At a carrier's appearance the hops still in the look-ahead are turned right
@@ -144,6 +146,7 @@ class CarrierFollower:
         self._used_hz = History((n,), self._lag + quantum, np.float64)
         self._last_edge: Floats = np.zeros(n)
         self._level: Floats = np.zeros(n)
+        self.bandwidth_hz: Floats = np.zeros(n)
 
     def process(self, iq: ComplexBlock) -> Turned:
         """Take in samples ``(n_channels, n)``, complex64; whole hops come out as they become known."""
@@ -214,6 +217,8 @@ class CarrierFollower:
         samples = self._line.latest(_LINE_HOPS * self.hop_samples - self._quantum, ago=self._quantum)
         sums = self._sums.sums_of(channel, samples[channel])
         back_s = np.arange(self._contest.length - 1, -1, -1) * hop_s
+        swept = line_hz * back_s - 0.5 * found.drift_hz_s * back_s**2
+        line_hz += residual_hz(sums * unit_phasor(swept[-len(sums) :]), hop_s)
         newest = float(self._reference.latest(1)[channel, 0])
         reference = newest - line_hz * back_s + 0.5 * found.drift_hz_s * back_s**2
         turned = sums * unit_phasor(-reference[-len(sums) :])
@@ -234,13 +239,17 @@ class CarrierFollower:
 
     def _turn(self, smoothed: Smoothed) -> Turned | None:
         hops, power = HOPS_A_QUANTUM, self._recipe.power
-        self._noise.measure(smoothed.quadrature, smoothed.present, self._watch.followed_s)
+        self._noise.measure(smoothed.quadrature, smoothed.noise_gain, smoothed.present, self._watch.followed_s)
         before, cycles = self._hold.hold(smoothed.line, np.sqrt(smoothed.noise_share * self._noise.held))
-        squared = smoothed.line.real**2 + smoothed.line.imag**2
-        noise_power = smoothed.noise_share * self._noise.power
-        given_up = self._watch.judge(squared.mean(axis=1), noise_power)
+        power_now = smoothed.recent.real**2 + smoothed.recent.imag**2
+        noise_now = smoothed.recent_share * self._noise.power
+        self.bandwidth_hz = 0.5 * smoothed.noise_share * self._sums.noise_bandwidth_hz
+        smoothed_power = np.mean(smoothed.line.real**2 + smoothed.line.imag**2, axis=1)
+        given_up = self._watch.judge(
+            smoothed_power / (smoothed.noise_share * self._noise.power), power_now.mean(axis=1) / noise_now
+        )
         narrow_noise = self._contest.narrow_share * self._noise.power
-        shift = self._motion.watch(smoothed.line, smoothed.narrow, narrow_noise, self._watch.locked)
+        shift = self._motion.watch(smoothed.narrow, narrow_noise, self._watch.confirmed)
         if shift.any():
             self._filter.shift(shift, self._motion.lag_hz)
         if given_up.any():
@@ -252,7 +261,7 @@ class CarrierFollower:
         edges = (reference + np.concatenate([before[:, None], cycles], axis=1)) / power
         edges = np.where(shown, edges, self._last_edge[:, None])
         self._last_edge = edges[:, -1].copy()
-        line = np.sqrt(np.maximum(squared - noise_power[:, None], 0.0))
+        line = np.sqrt(np.maximum(power_now - noise_now[:, None], 0.0))
         self._level += np.where(self._watch.locked, _LEVEL_GAIN, 0.0) * (line.mean(axis=1) - self._level)
         if self._quanta * hops <= self._look_hops:
             return None

@@ -18,8 +18,8 @@ JERK = 1.7e-3  # (Hz/s)^2/s
 _PAIR = 2  # hops a step: the filter's bandwidth is far under half the rate of pairs
 _PROMPT_GAIN = 0.19  # memory of the short-term amplitude: ten hops
 _PROMPT_NOISE = 0.1  # twice the share of one hop's noise power that the short-term amplitude carries
-_START = (0.02, 0.0, 0.0, 2.0, 0.0, 25.0)  # covariance of a line just found: cycles, Hz, Hz/s, squared
-_CEILING = (1.0, 10.0, 10.0, 25.0, 25.0, 25.0)
+_START = (0.02, 0.0, 0.0, 1.0, 0.0, 16.0)  # covariance of a line just found: cycles, Hz, Hz/s, squared
+_PHASE_CEILING = 1.0  # cycles squared: the phase is as good as unknown
 _PULL_PER_S = 2.0  # in fast fading: how quickly the frequency goes to the lag product's
 _TINY = 1e-300
 
@@ -35,6 +35,7 @@ class FrequencyFilter:
 
     def __init__(self, n_channels: int, hop_s: float) -> None:
         self._hop_s = hop_s
+        self._before_s = hop_s * (np.arange(_PAIR - 1, -1, -1) + 0.5)
         self.frequency_hz: Floats = np.zeros(n_channels)
         self.drift_hz_s: Floats = np.zeros(n_channels)
         self._phase: Floats = np.zeros(n_channels)
@@ -61,23 +62,29 @@ class FrequencyFilter:
         """Move frequencies found wrong, once."""
         self.frequency_hz[channels] += shift_hz[channels]
         self.drift_hz_s[channels] = 0.0
+        self._restart(channels)
 
-    def follow(
-        self, sums: NDArray[np.complex128], noise: Floats, active: Bools, fast: Floats, lag_hz: Floats
-    ) -> Floats:
+    def follow(self, sums: NDArray[np.complex128], noise: Floats, active: Bools, fast: Bools, lag_hz: Floats) -> Floats:
         """Go through a quantum of block sums; the frequency used on the way to each hop, ``(channels, hops)``, Hz.
 
         noise : noise power of one block sum. active : channels with a line to follow.
-        fast : 0 to 1, how far the frequency belongs to ``lag_hz``, the lag product's, instead of to the filter.
+        fast : where the frequency goes to ``lag_hz``, the lag product's, instead of by the filter.
         """
         used_hz = np.empty(sums.shape)
+        if fast.any():
+            self._restart(fast)
         for k in range(0, sums.shape[1], _PAIR):
             self._predict(fast, lag_hz)
-            used_hz[:, k : k + _PAIR] = self.frequency_hz[:, None]
-            self._correct(sums[:, k : k + _PAIR], noise, active, 1.0 - fast)
+            # On the way to a hop the frequency was that of half a hop before.
+            used_hz[:, k : k + _PAIR] = self.frequency_hz[:, None] - self.drift_hz_s[:, None] * self._before_s
+            self._correct(sums[:, k : k + _PAIR], noise, active & ~fast)
         return used_hz
 
-    def _predict(self, fast: Floats, lag_hz: Floats) -> None:
+    def _restart(self, channels: Bools) -> None:
+        for p, start in zip(self._p, _START, strict=True):
+            p[channels] = start
+
+    def _predict(self, fast: Bools, lag_hz: Floats) -> None:
         t = _PAIR * self._hop_s
         p00, p01, p02, p11, p12, p22 = self._p
         p00 = p00 + t * (2.0 * p01 + t * (p02 + p11 + t * (p12 + 0.25 * t * p22)))
@@ -91,7 +98,7 @@ class FrequencyFilter:
         self.drift_hz_s *= 1.0 - t * fast
         self.frequency_hz += t * (self.drift_hz_s + _PULL_PER_S * fast * lag_hz)
 
-    def _correct(self, pair: NDArray[np.complex128], noise: Floats, active: Bools, share: Floats) -> None:
+    def _correct(self, pair: NDArray[np.complex128], noise: Floats, active: Bools) -> None:
         back = self._phase[:, None] - self._hop_s * self.frequency_hz[:, None] * np.array([1.0, 0.0])
         z = np.mean(pair * unit_phasor(-back), axis=1)
         self._prompt += _PROMPT_GAIN * (z - self._prompt)
@@ -104,10 +111,11 @@ class FrequencyFilter:
         error = np.clip(error, -1.0, 1.0) / (2.0 * np.pi)
         p00, p01, p02, p11, p12, p22 = self._p
         variance = noise / (_PAIR * 8.0 * np.pi**2) / power
-        weight = np.where(counts, share / (p00 + variance + _TINY), 0.0)
+        weight = np.where(counts, 1.0 / (p00 + variance + _TINY), 0.0)
         k0, k1, k2 = p00 * weight, p01 * weight, p02 * weight
         self._phase += k0 * error
         self.frequency_hz += k1 * error
         self.drift_hz_s += k2 * error
         updated = (p00 - k0 * p00, p01 - k0 * p01, p02 - k0 * p02, p11 - k1 * p01, p12 - k1 * p02, p22 - k2 * p02)
-        self._p = tuple(np.minimum(p, top) for p, top in zip(updated, _CEILING, strict=True))
+        scale = _PHASE_CEILING / np.maximum(updated[0], _PHASE_CEILING)
+        self._p = tuple(p * scale for p in updated)

@@ -16,6 +16,7 @@ from rxchain.streams import Bools, Floats
 _ON = 10.0 ** (11.0 / 10.0)
 _OFF = 10.0 ** (7.0 / 10.0)
 _CEILING = 10.0 ** (24.0 / 10.0)  # else a strong carrier's loss would take long to be seen
+_RECENT_ALLOWANCE = 4.0  # so much more the longest window gathers; but a carrier just gone stays in it for a second
 _MEMORY_HOPS = 10.0
 _READY_HOPS = 12.0  # after the look-ahead: the statistic has forgotten how it began
 _COAST_S = 3.0
@@ -42,9 +43,13 @@ class LockWatch:
         self.confirmed[channel] = self.locked[channel] = False
         self.followed_s[channel] = self._statistic[channel] = self._weak_s[channel] = 0.0
 
-    def judge(self, power: Floats, noise_power: Floats) -> Bools:
-        """Take in a quantum, mean power of the smoothed line and noise power in it; the channels that are given up."""
-        ratio = np.minimum(power / np.maximum(noise_power, 1e-300), _CEILING)
+    def judge(self, ratio: Floats, recent_ratio: Floats) -> Bools:
+        """Take in a quantum; the channels that are given up.
+
+        ratio : power of the smoothed line over the noise in it.
+        recent_ratio : the same by the last 128 ms or less.
+        """
+        ratio = np.minimum(np.minimum(ratio, _RECENT_ALLOWANCE * recent_ratio), _CEILING)
         self._statistic += self._gain * (ratio - self._statistic)
         self.followed_s += self._quantum_s
         alive = self._statistic > _OFF

@@ -32,11 +32,16 @@ class QuadratureNoise:
         """A new line, with a first idea of the noise about it."""
         self.power[channel] = self.held[channel] = power
 
-    def measure(self, quadrature: Floats, present: NDArray[np.bool_], followed_s: Floats) -> None:
-        """Take in a quantum of quadratures; hops without any signal are no measurement."""
+    def measure(
+        self, quadrature: Floats, gain_of_difference: Floats, present: NDArray[np.bool_], followed_s: Floats
+    ) -> None:
+        """Take in a quantum of quadratures; hops without any signal are no measurement.
+
+        gain_of_difference : what the predictions behind the quadratures add to the noise, (channels,).
+        """
         series = np.concatenate([self._last, quadrature], axis=1)
         self._last = series[:, -self._span :]
-        square = (series[:, self._span :] - series[:, : -self._span]) ** 2
+        square = (series[:, self._span :] - series[:, : -self._span]) ** 2 / gain_of_difference[:, None]
         limit = np.where(followed_s < _SETTLING_S, np.inf, _OUTLIER * self.power)
         share = present.mean(axis=1)
         mean = np.mean(np.minimum(square, limit[:, None]) * present, axis=1) / np.maximum(share, 1e-3)

@@ -46,7 +46,7 @@ class Recipe:
     span_hops : length of a block sum's window. Two hops reach +-94 Hz; four keep out a message that begins at 100 Hz.
     half_lengths : the smoother's windows, (future, past), hops; the future is cut to the look-ahead there is.
     stacks : (spectra averaged, contrast asked for in dB): the longer the average, the less is asked for.
-    quick_db : a line this far over its surroundings in two spectra running is taken at once; None: never.
+    quick_db : a line this far over the mean power about it in two spectra running is taken at once; None: never.
     drift_hz_s : steepest drift of the carrier searched for.
     confirm_s : a line taken up is dropped unless confirmed within this time.
     hold_weight : weight of the phase held from before, in noise amplitudes of the smoother.
@@ -74,7 +74,7 @@ RECIPES: dict[Follow, Recipe] = {
         span_hops=2,
         half_lengths=((2, 2), *_LONG),
         stacks=((12, 8.5),),
-        quick_db=17.0,
+        quick_db=15.5,
         drift_hz_s=20.0,
         confirm_s=0.8,
         hold_weight=1.5,

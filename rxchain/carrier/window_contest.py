@@ -18,6 +18,7 @@ from rxchain.streams import Floats
 
 _MEMORY_S = 1.0
 _SHARPNESS_S = 0.35  # an excess e of a window's error counts as exp(-e * 0.35 s / hop)
+_RECENT_HOPS = 24
 _TINY = np.float32(1e-37)
 
 
@@ -26,16 +27,21 @@ class Smoothed:
     """A quantum of smoothed block sums, ``lag`` hops back.
 
     line : complex128, (channels, hops): the line's phasor against the reference it was turned by.
+    recent : complex128, (channels, hops): the same by windows of at most 128 ms to each side: what the line is now.
     quadrature : float64, (channels, hops): what each hop has across the phasor the other hops predict.
-    noise_share : float64, (channels,): noise power of ``line`` over that of one block sum.
-    narrow : complex64, (channels,): the last hop through the bank's second narrowest window, for fast motion.
+    noise_share, recent_share : float64, (channels,): noise power of each over that of one block sum.
+    noise_gain : float64, (channels,): what the difference of two quadratures makes of a block sum's noise power.
+    narrow : complex128, (channels, hops): the line by the bank's narrowest window, for fast motion.
     present : bool, (channels, hops): whether there was any signal at all in the hop.
     """
 
     line: NDArray[np.complex128]
+    recent: NDArray[np.complex128]
     quadrature: Floats
     noise_share: Floats
-    narrow: NDArray[np.complex64]
+    recent_share: Floats
+    noise_gain: Floats
+    narrow: NDArray[np.complex128]
     present: NDArray[np.bool_]
 
 
@@ -64,9 +70,10 @@ class WindowContest:
         windows /= windows.sum(axis=1, keepdims=True)
         middle = np.abs(i) <= self._reach
         self._middle_weight = windows[:, middle].sum(axis=1)
-        self.noise_shares = _noise_shares(windows, overlap_correlation)
-        self.narrow_share = float(self.noise_shares[self._narrow_index(pairs)])
-        self._narrow = self._narrow_index(pairs)
+        self._shares = _noise_powers(windows, overlap_correlation)
+        self._noise_gains = _difference_gains(windows, middle, overlap_correlation)
+        self._n_recent = sum(back <= _RECENT_HOPS for _, back in pairs)
+        self.narrow_share = float(self._shares[0])
         self._kernels = _staggered(windows, hops)
         self._middle_kernels = _staggered(windows[:, middle], hops)
         self._n_windows = len(pairs)
@@ -82,7 +89,7 @@ class WindowContest:
         blocks : float32, (2, channels, length): real and imaginary parts of the block sums, turned by the reference.
         noise : float64, (channels,): noise power of one block sum. followed_s : how long the line has been followed.
         """
-        n_channels, shape = blocks.shape[1], (2, blocks.shape[1], self._hops, self._n_windows)
+        shape = (2, blocks.shape[1], self._hops, self._n_windows)
         centre = blocks.shape[2] - self._lag - self._hops
         around = blocks[:, :, centre - self._reach : centre + self._hops + self._reach]
         middle = blocks[:, :, centre : centre + self._hops, None]
@@ -94,14 +101,23 @@ class WindowContest:
         power = middle[0, :, :, 0].astype(np.float64) ** 2 + middle[1, :, :, 0].astype(np.float64) ** 2
         present = power > 1e-6 * noise[:, None]
         mix = self._compare(across, present, followed_s)
-        weights = mix.astype(np.float32)[:, :, None]
-        parts = np.matmul(full, weights)[..., 0]
-        line = np.empty((n_channels, self._hops), np.complex128)
-        line.real, line.imag = parts
-        back = np.matmul(others, weights)[..., 0].astype(np.float64)
-        quadrature = (middle[1, :, :, 0] * back[0] - middle[0, :, :, 0] * back[1]) / (np.hypot(*back) + 1e-300)
-        narrow = full[0, :, -1, self._narrow] + 1j * full[1, :, -1, self._narrow]
-        return Smoothed(line, quadrature, mix @ self.noise_shares, narrow, present)
+        # The windows that reach far back lend their weight to the longest that does not.
+        recent = mix[:, : self._n_recent].copy()
+        recent[:, -1] += mix[:, self._n_recent :].sum(axis=1)
+        line = _weighed(full, mix)
+        back = _weighed(others, mix)
+        quadrature = (middle[1, :, :, 0] * back.real - middle[0, :, :, 0] * back.imag) / (np.abs(back) + 1e-300)
+        narrow = full[0, ..., 0].astype(np.float64) + 1j * full[1, ..., 0]
+        return Smoothed(
+            line=line,
+            recent=_weighed(full[..., : self._n_recent], recent),
+            quadrature=quadrature,
+            noise_share=mix @ self._shares,
+            recent_share=recent @ self._shares[: self._n_recent],
+            noise_gain=mix @ self._noise_gains,
+            narrow=narrow,
+            present=present,
+        )
 
     def _compare(self, across: NDArray[np.float32], present: NDArray[np.bool_], followed_s: Floats) -> Floats:
         since = np.maximum(followed_s - self._lag * self._quantum_s / self._hops, 0.0) / self._quantum_s
@@ -113,10 +129,6 @@ class WindowContest:
         mix /= mix.sum(axis=1, keepdims=True)
         return mix
 
-    @staticmethod
-    def _narrow_index(pairs: list[tuple[int, int]]) -> int:
-        return next(index for index, (_, past) in enumerate(pairs) if past == 5)
-
 
 def _raised_cosine(i: NDArray[np.int64], future: int, past: int) -> Floats:
     half = np.where(i >= 0, future + 1.0, past + 1.0)
@@ -124,12 +136,29 @@ def _raised_cosine(i: NDArray[np.int64], future: int, past: int) -> Floats:
     return window
 
 
-def _noise_shares(windows: Floats, overlap_correlation: Floats) -> Floats:
-    shares = np.zeros(len(windows))
+def _weighed(bank: NDArray[np.float32], mix: Floats) -> NDArray[np.complex128]:
+    parts = np.matmul(bank, mix.astype(np.float32)[:, :, None])[..., 0]
+    line = np.empty(parts.shape[1:], np.complex128)
+    line.real, line.imag = parts
+    return line
+
+
+def _noise_powers(windows: Floats, overlap_correlation: Floats) -> Floats:
+    """Noise power of each window's output over that of one block sum; overlapped block sums share samples."""
+    powers = np.zeros(len(windows))
     for i, correlation in enumerate(overlap_correlation):
         products = windows[:, i:] * windows[:, : windows.shape[1] - i]
-        shares += (1.0 if i == 0 else 2.0) * correlation * products.sum(axis=1)
-    return shares
+        powers += (1.0 if i == 0 else 2.0) * correlation * products.sum(axis=1)
+    return powers
+
+
+def _difference_gains(windows: Floats, middle: NDArray[np.bool_], overlap_correlation: Floats) -> Floats:
+    """Noise power of a hop less its prediction, less the same ``span`` hops before, over twice a block sum's."""
+    span = len(overlap_correlation)
+    residue = np.where(middle, 0.0, -windows) / np.sum(np.where(middle, 0.0, windows), axis=1, keepdims=True)
+    residue[:, int(np.flatnonzero(middle).mean())] += 1.0
+    padded = np.pad(residue, ((0, 0), (span, span)))
+    return 0.5 * _noise_powers(padded[:, span:] - padded[:, :-span], overlap_correlation)
 
 
 def _staggered(windows: Floats, hops: int) -> NDArray[np.float32]:
