@@ -14,45 +14,36 @@ from numpy.typing import NDArray
 
 from rxchain.carrier.block_sums import hann
 from rxchain.carrier.line_choice import LineChoice
+from rxchain.carrier.line_fit import fit_line, peak_bins
 from rxchain.carrier.settings import Recipe
-from rxchain.carrier.slant_stack import SlantStack
+from rxchain.carrier.slant_stack import SlantStack, Stacked
 from rxchain.streams import Bools, ComplexBlock, Counts, Floats
 
 SPECTRUM_HOPS = 32
 EVERY_HOPS = 16
-_FINE_SIZE = 512
 _AROUND_HZ = 100.0
 _QUICK_FALL_DB = 3.0  # what a quick line may have gained since the spectrum before
 _LOG_MEAN_DB = 2.51  # mean power over mean log power of noise: Euler's constant in dB
+_QUICK_COVARIANCE = (1.0, 0.0, 100.0)  # the drift may be any that is searched for
 _FLOOR = np.float32(1e-37)
 
 
 @dataclass(frozen=True, slots=True)
 class Found:
-    """A line taken up: its frequency at the newest sample, its drift, and the noise per hertz about it."""
+    """A line to take up.
+
+    line_hz, drift_hz_s : its frequency at the newest sample, and its drift.
+    covariance : of the two: Hz^2, Hz^2/s, (Hz/s)^2.
+    noise_density : noise per hertz about it.
+    quick : found in two spectra only, its drift not known at all.
+    """
 
     channel: int
     line_hz: float
     drift_hz_s: float
+    covariance: tuple[float, float, float]
     noise_density: float
-
-
-def residual_hz(blocks: ComplexBlock, hop_s: float) -> float:
-    """Frequency, within a spectrum's bin of zero, of a line whose block sums ``(hops,)`` were turned by what is known.
-
-    The peak of their spectrum: the maximum-likelihood estimate (D. C. Rife and R. R. Boorstyn, "Single-tone parameter
-    estimation from discrete-time observations", IEEE Trans. IT-20, 1974).
-    """
-    size = _FINE_SIZE
-    power = np.abs(np.fft.fft(blocks, size)) ** 2
-    reach = int(np.ceil(size / SPECTRUM_HOPS))
-    k = np.arange(-reach, reach + 1)
-    near = power[k]
-    peak = int(np.argmax(near[1:-1])) + 1
-    left, top, right = (float(v) for v in near[peak - 1 : peak + 2])
-    bend = left - 2.0 * top + right
-    step = float(np.clip(0.5 * (left - right) / bend, -0.5, 0.5)) if bend < 0.0 else 0.0
-    return (float(k[peak]) + step) / (size * hop_s)
+    quick: bool
 
 
 class Acquisition:
@@ -122,39 +113,51 @@ class Acquisition:
         near = np.max([before[rows, margin + peak + step] for step in (-1, 0, 1)], axis=0)
         over = height - np.mean(last, axis=1) - _LOG_MEAN_DB
         clear = (over > quick_db) & (near > height - _QUICK_FALL_DB)
-        return {
-            int(channels[i]): self._found(int(channels[i]), int(peak[i]), 0.0, float(np.mean(last[i])))
-            for i in np.flatnonzero(clear)
-        }
+        found: dict[int, Found] = {}
+        for i in np.flatnonzero(clear):
+            place, _ = peak_bins(last[i], margin + int(peak[i]), 1)
+            channel, density = int(channels[i]), _density(float(np.mean(last[i])))
+            found[channel] = Found(channel, self._line_hz(place), 0.0, _QUICK_COVARIANCE, density, quick=True)
+        return found
 
     def _slow(self, channels: Counts) -> dict[int, Found]:
         longest = int(min(self._kept, self._seen[channels].max()))
-        stacks = self._stack.stack(self._spectra(channels, longest))
+        newest_first = self._spectra(channels, longest)
+        stacks = self._stack.stack(newest_first)
         found: dict[int, Found] = {}
         for spectra, contrast_db in self._recipe.stacks:
             if spectra not in stacks:
                 continue
             stacked = stacks[spectra]
-            enough = self._seen[channels] >= spectra
-            passing = (stacked.contrast_db > contrast_db) & enough[:, None]
+            passing = (stacked.contrast_db > contrast_db) & (self._seen[channels] >= spectra)[:, None]
             for i in np.flatnonzero(passing.any(axis=1)):
-                channel = int(channels[i])
-                peak = self._choice.choose(
-                    channel, self._offsets_hz, stacked.contrast_db[i], stacked.level_db[i], contrast_db
-                )
-                around_db = float(stacked.level_db[i, peak] - stacked.contrast_db[i, peak])
-                drift_hz_s = float(stacked.drift_bins[i, peak]) * self._bin_hz / self._every_s
-                found.setdefault(channel, self._found(channel, peak, drift_hz_s, around_db))
+                levels = np.array([spectrum[i] for spectrum in newest_first[:spectra]])
+                if int(channels[i]) not in found:
+                    found[int(channels[i])] = self._fitted(int(channels[i]), int(i), levels, stacked, contrast_db)
         return found
 
-    def _found(self, channel: int, peak: int, drift_hz_s: float, around_db: float) -> Found:
-        """Refined on the last spectrum: an average is as old as it is long."""
-        middle = self._stack.margin + peak
-        nearby = self._log[self._newest, channel, middle - 1 : middle + 2]
-        middle += int(np.argmax(nearby)) - 1
-        left, top, right = (float(v) for v in self._log[self._newest, channel, middle - 1 : middle + 2])
-        bend = left - 2.0 * top + right
-        step = float(np.clip(0.5 * (left - right) / bend, -0.5, 0.5)) if bend < 0.0 else 0.0
-        line_hz = (middle + step - len(self._taken) // 2) * self._bin_hz + drift_hz_s * self._every_s
-        density = 10.0 ** ((around_db + _LOG_MEAN_DB) / 10.0)
-        return Found(channel, line_hz, drift_hz_s, density)
+    def _fitted(
+        self, channel: int, row: int, newest_first: NDArray[np.float32], stacked: Stacked, threshold_db: float
+    ) -> Found:
+        contrast_db, level_db = stacked.contrast_db[row], stacked.level_db[row]
+        peak = self._choice.choose(channel, self._offsets_hz, contrast_db, level_db, threshold_db)
+        around_db = float(level_db[peak] - contrast_db[peak])
+        drift = float(stacked.drift_bins[row, peak])
+        fit = fit_line(
+            newest_first, self._stack.margin + peak, drift, self._stack.drift_error(len(newest_first)), around_db
+        )
+        bin_hz, drift_unit = self._bin_hz, self._bin_hz / self._every_s
+        covariance = (
+            bin_hz**2 * fit.variance,
+            bin_hz * drift_unit * fit.covariance,
+            drift_unit**2 * fit.drift_variance,
+        )
+        line_hz, drift_hz_s = self._line_hz(fit.position_bins), fit.drift_bins * drift_unit
+        return Found(channel, line_hz, drift_hz_s, covariance, _density(around_db), quick=False)
+
+    def _line_hz(self, place: float) -> float:
+        return (place - len(self._taken) // 2) * self._bin_hz
+
+
+def _density(mean_log_db: float) -> float:
+    return float(10.0 ** ((mean_log_db + _LOG_MEAN_DB) / 10.0))

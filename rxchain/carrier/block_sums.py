@@ -45,6 +45,12 @@ class BlockSums:
             self.tuned_hz = np.where(far, line_hz, self.tuned_hz)
             self._remake(far)
 
+    def tune(self, channel: int, line_hz: float) -> None:
+        """Move one channel's window, however far."""
+        which = np.arange(len(self.tuned_hz)) == channel
+        self.tuned_hz = np.where(which, line_hz, self.tuned_hz)
+        self._remake(which)
+
     def sums(self, samples: ComplexBlock) -> ComplexBlock:
         """Sums of ``(channels, (hops + span - 1) * hop_samples)`` samples: complex64, ``(channels, hops)``."""
         return self._sums(samples, self._weights)

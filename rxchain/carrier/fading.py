@@ -14,7 +14,7 @@ from rxchain.streams import Bools, Floats
 _LAG_MEMORY_S = 0.3
 _COHERENT = 2.0  # lag product over noise power: noise alone gives its correlation, 0.5 to 0.9
 _WRONG_HZ = 1.0
-_WRONG_S = 0.5
+_ASTRAY_CYCLES = 0.5  # half a second at 1 Hz, less at more
 _SPREAD_MEMORY_S = 2.0
 _FAST_HZ, _CALM_HZ = 3.0, 2.0  # above and below which the frequency belongs to the lag product, and to the filter
 _CLEAR = 10.0  # power over noise at which a phase counts for the spread
@@ -38,7 +38,7 @@ class MotionWatch:
         self._product = np.zeros(n_channels, np.complex128)
         self._slow_product = np.zeros(n_channels, np.complex128)
         self._slow_size: Floats = np.zeros(n_channels)
-        self._wrong_s: Floats = np.zeros(n_channels)
+        self._astray: Floats = np.zeros(n_channels)
         self.lag_hz: Floats = np.zeros(n_channels)
         self.fast: Bools = np.zeros(n_channels, np.bool_)
 
@@ -46,14 +46,14 @@ class MotionWatch:
         """A new line."""
         for state in (self._last, self._product, self._slow_product):
             state[channel] = 0.0
-        for figure in (self._slow_size, self._wrong_s, self.lag_hz):
+        for figure in (self._slow_size, self._astray, self.lag_hz):
             figure[channel] = 0.0
         self.fast[channel] = False
 
-    def watch(self, line: NDArray[np.complex128], noise: Floats, confirmed: Bools) -> Bools:
+    def watch(self, line: NDArray[np.complex128], noise: Floats, active: Bools) -> Bools:
         """Take in a quantum; the channels whose frequency is to be shifted by ``lag_hz``, once.
 
-        line : the line by the narrowest window, wide enough in frequency to show what the frequency filter has missed;
+        line : the line by a narrow window, wide enough in frequency to show what the frequency filter has missed;
             complex128, (channels, hops). noise : noise power in it.
         """
         earlier = np.concatenate([self._last[:, None], line[:, :-1]], axis=1)
@@ -61,19 +61,20 @@ class MotionWatch:
         self._product += self._gain * (product - self._product)
         self.lag_hz = np.angle(self._product) / (2.0 * np.pi * self._hop_s)
         if self._fast_fading:
-            self._measure_spread(line[:, -1] * self._last.conj(), noise, confirmed)
+            self._measure_spread(line[:, -1] * self._last.conj(), noise, active)
         self._last = line[:, -1]
         coherent = np.abs(self._product) > _COHERENT * noise
-        wrong = confirmed & coherent & (np.abs(self.lag_hz) > _WRONG_HZ) & ~self.fast
-        self._wrong_s = np.where(wrong, self._wrong_s + self._quantum_s, 0.0)
-        shift = self._wrong_s > _WRONG_S
-        self._wrong_s[shift] = 0.0
+        wrong_hz = np.abs(self.lag_hz)
+        wrong = active & coherent & (wrong_hz > _WRONG_HZ) & ~self.fast
+        self._astray = np.where(wrong, self._astray + wrong_hz * self._quantum_s, 0.0)
+        shift = self._astray > _ASTRAY_CYCLES
+        self._astray[shift] = 0.0
         self._product[shift] = 0.0
         return shift
 
-    def _measure_spread(self, product: NDArray[np.complex128], noise: Floats, confirmed: Bools) -> None:
+    def _measure_spread(self, product: NDArray[np.complex128], noise: Floats, active: Bools) -> None:
         size = np.abs(product)
-        gain = self._spread_gain * (confirmed & (size > _CLEAR * noise))
+        gain = self._spread_gain * (active & (size > _CLEAR * noise))
         self._slow_product += gain * (product - self._slow_product)
         # Noise makes phasors differ too: its share is taken off before they are compared.
         self._slow_size += gain * (size - 0.5 * noise - self._slow_size)

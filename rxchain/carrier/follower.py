@@ -20,7 +20,7 @@ from typing import Protocol
 
 import numpy as np
 
-from rxchain.carrier.acquisition import EVERY_HOPS, SPECTRUM_HOPS, Acquisition, Found, residual_hz
+from rxchain.carrier.acquisition import EVERY_HOPS, SPECTRUM_HOPS, Acquisition, Found
 from rxchain.carrier.block_sums import BlockSums
 from rxchain.carrier.derotation import derotate
 from rxchain.carrier.fading import MotionWatch
@@ -28,6 +28,7 @@ from rxchain.carrier.frequency_filter import FrequencyFilter, unit_phasor
 from rxchain.carrier.history import History
 from rxchain.carrier.hops import HOPS_A_QUANTUM, LIVE_LOOK_AHEAD_HOPS, LOOK_AHEAD_HOPS, hop_samples
 from rxchain.carrier.line_choice import LineChoice
+from rxchain.carrier.line_fit import residual_hz
 from rxchain.carrier.lock_watch import LockWatch
 from rxchain.carrier.message_band import MessageBand
 from rxchain.carrier.nominal import NominalFollower
@@ -44,6 +45,8 @@ __all__ = ["CarrierFollower", "Follower", "FollowerSettings", "NominalFollower",
 
 _LINE_HOPS = 48  # kept of the line's signal: a spectrum, and what the look-ahead is made again from
 _PHASE_HOPS = 12  # a new line's phase is the mean of so many block sums
+_QUICK_REACH_HZ = 6.0  # a bin of the spectra a quick line is found in
+_STEEPEST = 2.0  # drifts grow no steeper than so many times those searched for
 _LEVEL_GAIN = 0.02  # a quantum: memory of the line's level, 1 s
 
 
@@ -129,7 +132,7 @@ class CarrierFollower:
             self.settings.follow, recipe.power * self.settings.search_hz, self.settings.message_hz, self._sides
         )
         self._acquisition = Acquisition(n, self._rate_hz, self.hop_samples, recipe, choice)
-        self._filter = FrequencyFilter(n, hop_s)
+        self._filter = FrequencyFilter(n, hop_s, _STEEPEST * recipe.power * recipe.drift_hz_s)
         self._contest = WindowContest(n, recipe.half_lengths, self._lag, quantum, hop_s, self._sums.overlap_correlation)
         self._noise = QuadratureNoise(n, recipe.span_hops, quantum, hop_s, recipe.hold_s)
         self._hold = PhaseHold(n, recipe.hold_weight)
@@ -212,13 +215,13 @@ class CarrierFollower:
         channel, hop_s = found.channel, self._hop_s
         hops_ago = HOPS_A_QUANTUM + self._recipe.span_hops // 2
         line_hz = found.line_hz - found.drift_hz_s * hops_ago * hop_s
-        self._filter.start(channel, 0.0, line_hz, found.drift_hz_s, 0.0)
-        self._sums.retune(self._filter.frequency_hz)
+        self._sums.tune(channel, line_hz)
         samples = self._line.latest(_LINE_HOPS * self.hop_samples - self._quantum, ago=self._quantum)
         sums = self._sums.sums_of(channel, samples[channel])
         back_s = np.arange(self._contest.length - 1, -1, -1) * hop_s
         swept = line_hz * back_s - 0.5 * found.drift_hz_s * back_s**2
-        line_hz += residual_hz(sums * unit_phasor(swept[-len(sums) :]), hop_s)
+        if found.quick:
+            line_hz += residual_hz(sums * unit_phasor(swept[-len(sums) :]), hop_s, _QUICK_REACH_HZ)
         newest = float(self._reference.latest(1)[channel, 0])
         reference = newest - line_hz * back_s + 0.5 * found.drift_hz_s * back_s**2
         turned = sums * unit_phasor(-reference[-len(sums) :])
@@ -231,7 +234,7 @@ class CarrierFollower:
         used_hz[...] = line_hz - found.drift_hz_s * (back_s[-len(used_hz) :] + 0.5 * hop_s)
         mean = np.mean(turned[-_PHASE_HOPS:])
         phase = newest + float(np.angle(mean)) / (2.0 * np.pi)
-        self._filter.start(channel, phase, line_hz, found.drift_hz_s, float(np.abs(mean)))
+        self._filter.start(channel, phase, line_hz, found.drift_hz_s, found.covariance, float(np.abs(mean)))
         self._noise.start(channel, found.noise_density * self._sums.noise_bandwidth_hz)
         for part in (self._contest, self._hold, self._watch, self._motion):
             part.start(channel)
@@ -249,7 +252,7 @@ class CarrierFollower:
             smoothed_power / (smoothed.noise_share * self._noise.power), power_now.mean(axis=1) / noise_now
         )
         narrow_noise = self._contest.narrow_share * self._noise.power
-        shift = self._motion.watch(smoothed.narrow, narrow_noise, self._watch.confirmed)
+        shift = self._motion.watch(smoothed.narrow, narrow_noise, self._watch.active)
         if shift.any():
             self._filter.shift(shift, self._motion.lag_hz)
         if given_up.any():

@@ -18,7 +18,9 @@ JERK = 1.7e-3  # (Hz/s)^2/s
 _PAIR = 2  # hops a step: the filter's bandwidth is far under half the rate of pairs
 _PROMPT_GAIN = 0.19  # memory of the short-term amplitude: ten hops
 _PROMPT_NOISE = 0.1  # twice the share of one hop's noise power that the short-term amplitude carries
-_START = (0.02, 0.0, 0.0, 1.0, 0.0, 16.0)  # covariance of a line just found: cycles, Hz, Hz/s, squared
+_PHASE_VARIANCE = 0.02  # of a line just found, cycles squared
+_SHIFTED = (_PHASE_VARIANCE, 0.0, 0.0, 1.0, 0.0, 16.0)  # of a line whose frequency was found wrong
+_FADING = (_PHASE_VARIANCE, 0.0, 0.0, 1.0, 0.0, 1.0)  # of a line that fades too fast for the filter
 _PHASE_CEILING = 1.0  # cycles squared: the phase is as good as unknown
 _PULL_PER_S = 2.0  # in fast fading: how quickly the frequency goes to the lag product's
 _TINY = 1e-300
@@ -33,8 +35,8 @@ def unit_phasor(cycles: Floats) -> NDArray[np.complex128]:
 class FrequencyFilter:
     """Phase, frequency and drift of each channel's line, one step every two hops."""
 
-    def __init__(self, n_channels: int, hop_s: float) -> None:
-        self._hop_s = hop_s
+    def __init__(self, n_channels: int, hop_s: float, steepest_hz_s: float) -> None:
+        self._hop_s, self._steepest = hop_s, steepest_hz_s
         self._before_s = hop_s * (np.arange(_PAIR - 1, -1, -1) + 0.5)
         self.frequency_hz: Floats = np.zeros(n_channels)
         self.drift_hz_s: Floats = np.zeros(n_channels)
@@ -43,14 +45,20 @@ class FrequencyFilter:
         self._p: tuple[Floats, ...] = tuple(np.zeros(n_channels) for _ in range(6))
 
     def start(
-        self, channel: int, phase_cycles: float, frequency_hz: float, drift_hz_s: float, amplitude: float
+        self,
+        channel: int,
+        phase_cycles: float,
+        frequency_hz: float,
+        drift_hz_s: float,
+        covariance: tuple[float, float, float],
+        amplitude: float,
     ) -> None:
-        """Take up a line whose phase is known at the newest hop."""
+        """Take up a line as it is at the newest hop; the covariance is that of frequency and drift."""
         self._phase[channel] = phase_cycles
         self.frequency_hz[channel] = frequency_hz
         self.drift_hz_s[channel] = drift_hz_s
         self._prompt[channel] = amplitude
-        for p, start in zip(self._p, _START, strict=True):
+        for p, start in zip(self._p, (_PHASE_VARIANCE, 0.0, 0.0, *covariance), strict=True):
             p[channel] = start
 
     def stop(self, channels: Bools) -> None:
@@ -61,8 +69,7 @@ class FrequencyFilter:
     def shift(self, channels: Bools, shift_hz: Floats) -> None:
         """Move frequencies found wrong, once."""
         self.frequency_hz[channels] += shift_hz[channels]
-        self.drift_hz_s[channels] = 0.0
-        self._restart(channels)
+        self._restart(channels, _SHIFTED)
 
     def follow(self, sums: NDArray[np.complex128], noise: Floats, active: Bools, fast: Bools, lag_hz: Floats) -> Floats:
         """Go through a quantum of block sums; the frequency used on the way to each hop, ``(channels, hops)``, Hz.
@@ -72,16 +79,16 @@ class FrequencyFilter:
         """
         used_hz = np.empty(sums.shape)
         if fast.any():
-            self._restart(fast)
+            self._restart(fast, _FADING)
         for k in range(0, sums.shape[1], _PAIR):
             self._predict(fast, lag_hz)
             # On the way to a hop the frequency was that of half a hop before.
             used_hz[:, k : k + _PAIR] = self.frequency_hz[:, None] - self.drift_hz_s[:, None] * self._before_s
-            self._correct(sums[:, k : k + _PAIR], noise, active & ~fast)
+            self._correct(sums[:, k : k + _PAIR], noise, active, fast)
         return used_hz
 
-    def _restart(self, channels: Bools) -> None:
-        for p, start in zip(self._p, _START, strict=True):
+    def _restart(self, channels: Bools, covariance: tuple[float, ...]) -> None:
+        for p, start in zip(self._p, covariance, strict=True):
             p[channels] = start
 
     def _predict(self, fast: Bools, lag_hz: Floats) -> None:
@@ -98,7 +105,7 @@ class FrequencyFilter:
         self.drift_hz_s *= 1.0 - t * fast
         self.frequency_hz += t * (self.drift_hz_s + _PULL_PER_S * fast * lag_hz)
 
-    def _correct(self, pair: NDArray[np.complex128], noise: Floats, active: Bools) -> None:
+    def _correct(self, pair: NDArray[np.complex128], noise: Floats, active: Bools, fast: Bools) -> None:
         back = self._phase[:, None] - self._hop_s * self.frequency_hz[:, None] * np.array([1.0, 0.0])
         z = np.mean(pair * unit_phasor(-back), axis=1)
         self._prompt += _PROMPT_GAIN * (z - self._prompt)
@@ -112,10 +119,12 @@ class FrequencyFilter:
         p00, p01, p02, p11, p12, p22 = self._p
         variance = noise / (_PAIR * 8.0 * np.pi**2) / power
         weight = np.where(counts, 1.0 / (p00 + variance + _TINY), 0.0)
-        k0, k1, k2 = p00 * weight, p01 * weight, p02 * weight
+        # In fast fading the phase alone follows, to be right when the filter has its frequency back.
+        slow = ~fast
+        k0, k1, k2 = p00 * weight, p01 * weight * slow, p02 * weight * slow
         self._phase += k0 * error
         self.frequency_hz += k1 * error
-        self.drift_hz_s += k2 * error
+        self.drift_hz_s = np.clip(self.drift_hz_s + k2 * error, -self._steepest, self._steepest)
         updated = (p00 - k0 * p00, p01 - k0 * p01, p02 - k0 * p02, p11 - k1 * p01, p12 - k1 * p02, p22 - k2 * p02)
         scale = _PHASE_CEILING / np.maximum(updated[0], _PHASE_CEILING)
         self._p = tuple(p * scale for p in updated)

@@ -45,6 +45,10 @@ class SlantStack:
         self.margin = self._around + self._reach
         self.width = bins + 2 * self.margin
 
+    def drift_error(self, spectra: int) -> float:
+        """One standard deviation of a drift found in so many spectra, bins a spectrum: a third of the 3 dB width."""
+        return _STEP_BINS / spectra
+
     def stack(self, newest_first: list[NDArray[np.float32]]) -> dict[int, Stacked]:
         """Stacks by their length; spectra in dB, ``(channels, width)``, with the margin to each side."""
         n_channels = newest_first[0].shape[0]

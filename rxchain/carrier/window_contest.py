@@ -19,6 +19,7 @@ from rxchain.streams import Floats
 _MEMORY_S = 1.0
 _SHARPNESS_S = 0.35  # an excess e of a window's error counts as exp(-e * 0.35 s / hop)
 _RECENT_HOPS = 24
+_NARROW_HOPS = 5
 _TINY = np.float32(1e-37)
 
 
@@ -31,7 +32,7 @@ class Smoothed:
     quadrature : float64, (channels, hops): what each hop has across the phasor the other hops predict.
     noise_share, recent_share : float64, (channels,): noise power of each over that of one block sum.
     noise_gain : float64, (channels,): what the difference of two quadratures makes of a block sum's noise power.
-    narrow : complex128, (channels, hops): the line by the bank's narrowest window, for fast motion.
+    narrow : complex128, (channels, hops): the line by a window of 5 hops to each side, for fast motion.
     present : bool, (channels, hops): whether there was any signal at all in the hop.
     """
 
@@ -73,7 +74,8 @@ class WindowContest:
         self._shares = _noise_powers(windows, overlap_correlation)
         self._noise_gains = _difference_gains(windows, middle, overlap_correlation)
         self._n_recent = sum(back <= _RECENT_HOPS for _, back in pairs)
-        self.narrow_share = float(self._shares[0])
+        self._narrow = next(index for index, (_, back) in enumerate(pairs) if back >= _NARROW_HOPS)
+        self.narrow_share = float(self._shares[self._narrow])
         self._kernels = _staggered(windows, hops)
         self._middle_kernels = _staggered(windows[:, middle], hops)
         self._n_windows = len(pairs)
@@ -107,7 +109,7 @@ class WindowContest:
         line = _weighed(full, mix)
         back = _weighed(others, mix)
         quadrature = (middle[1, :, :, 0] * back.real - middle[0, :, :, 0] * back.imag) / (np.abs(back) + 1e-300)
-        narrow = full[0, ..., 0].astype(np.float64) + 1j * full[1, ..., 0]
+        narrow = full[0, ..., self._narrow].astype(np.float64) + 1j * full[1, ..., self._narrow]
         return Smoothed(
             line=line,
             recent=_weighed(full[..., : self._n_recent], recent),
