@@ -93,8 +93,9 @@ class Acquisition:
         free_channels = np.flatnonzero(free & searching & (self._seen >= 2))
         quick_db = self._recipe.quick_db
         found = self._quick(free_channels, quick_db) if quick_db is not None and len(free_channels) else {}
-        shortest = self._recipe.stacks[0][0]
-        ready = np.array([c for c in free_channels if self._seen[c] >= shortest and c not in found], np.int64)
+        since = self._seen[free_channels] - self._recipe.stacks[0][0]
+        due = free_channels[(since >= 0) & (since % self._recipe.stack_every == 0)]
+        ready = np.array([channel for channel in due if channel not in found], np.int64)
         if len(ready):
             found |= self._slow(ready)
         return list(found.values())
@@ -142,7 +143,7 @@ class Acquisition:
         contrast_db, level_db = stacked.contrast_db[row], stacked.level_db[row]
         peak = self._choice.choose(channel, self._offsets_hz, contrast_db, level_db, threshold_db)
         around_db = float(level_db[peak] - contrast_db[peak])
-        drift = float(stacked.drift_bins[row, peak])
+        drift = self._stack.drift_at(newest_first, peak)
         fit = fit_line(
             newest_first, self._stack.margin + peak, drift, self._stack.drift_error(len(newest_first)), around_db
         )

@@ -24,7 +24,7 @@ from rxchain.carrier.acquisition import EVERY_HOPS, SPECTRUM_HOPS, Acquisition, 
 from rxchain.carrier.block_sums import BlockSums
 from rxchain.carrier.derotation import derotate
 from rxchain.carrier.fading import MotionWatch
-from rxchain.carrier.frequency_filter import FrequencyFilter, unit_phasor
+from rxchain.carrier.frequency_filter import FrequencyFilter
 from rxchain.carrier.history import History
 from rxchain.carrier.hops import HOPS_A_QUANTUM, LIVE_LOOK_AHEAD_HOPS, LOOK_AHEAD_HOPS, hop_samples
 from rxchain.carrier.line_choice import LineChoice
@@ -33,6 +33,7 @@ from rxchain.carrier.lock_watch import LockWatch
 from rxchain.carrier.message_band import MessageBand
 from rxchain.carrier.nominal import NominalFollower
 from rxchain.carrier.phase_hold import PhaseHold
+from rxchain.carrier.phasor import unit_phasor
 from rxchain.carrier.power_law import line_amplitude, line_signal, signal_noise_density
 from rxchain.carrier.quadrature_noise import QuadratureNoise
 from rxchain.carrier.settings import RECIPES, FollowerSettings
@@ -45,7 +46,7 @@ __all__ = ["CarrierFollower", "Follower", "FollowerSettings", "NominalFollower",
 
 _LINE_HOPS = 48  # kept of the line's signal: a spectrum, and what the look-ahead is made again from
 _PHASE_HOPS = 12  # a new line's phase is the mean of so many block sums
-_QUICK_REACH_HZ = 6.0  # a bin of the spectra a quick line is found in
+_REFINED_HZ = 6.0  # a bin of the spectra a line is found in
 _STEEPEST = 2.0  # drifts grow no steeper than so many times those searched for
 _LEVEL_GAIN = 0.02  # a quantum: memory of the line's level, 1 s
 
@@ -132,7 +133,7 @@ class CarrierFollower:
             self.settings.follow, recipe.power * self.settings.search_hz, self.settings.message_hz, self._sides
         )
         self._acquisition = Acquisition(n, self._rate_hz, self.hop_samples, recipe, choice)
-        self._filter = FrequencyFilter(n, hop_s, _STEEPEST * recipe.power * recipe.drift_hz_s)
+        self._filter = FrequencyFilter(n, quantum, hop_s, _STEEPEST * recipe.power * recipe.drift_hz_s)
         self._contest = WindowContest(n, recipe.half_lengths, self._lag, quantum, hop_s, self._sums.overlap_correlation)
         self._noise = QuadratureNoise(n, recipe.span_hops, quantum, hop_s, recipe.hold_s)
         self._hold = PhaseHold(n, recipe.hold_weight)
@@ -201,14 +202,14 @@ class CarrierFollower:
 
     def _push_blocks(self, sums: ComplexBlock) -> None:
         used_hz = self._filter.follow(
-            sums.astype(np.complex128), self._noise.held, self._watch.active, self._motion.fast, self._motion.lag_hz
+            sums, self._noise.held, self._watch.active, self._motion.fast, self._motion.lag_hz
         )
         # The blocks are turned by the integral of the frequency: the filter's phase takes kicks, which would stay.
         reference = self._reference.latest(1) + np.cumsum(used_hz, axis=1) * self._hop_s
         self._used_hz.push(used_hz)
         self._reference.push(reference)
         turned = sums * unit_phasor(-reference)
-        self._blocks.push(np.stack([turned.real, turned.imag]).astype(np.float32))
+        self._blocks.push(np.stack([turned.real, turned.imag]))
 
     def _take_up(self, found: Found) -> None:
         """Follow a new line, and make the look-ahead again at its frequency, so that it is turned right."""
@@ -220,8 +221,8 @@ class CarrierFollower:
         sums = self._sums.sums_of(channel, samples[channel])
         back_s = np.arange(self._contest.length - 1, -1, -1) * hop_s
         swept = line_hz * back_s - 0.5 * found.drift_hz_s * back_s**2
-        if found.quick:
-            line_hz += residual_hz(sums * unit_phasor(swept[-len(sums) :]), hop_s, _QUICK_REACH_HZ)
+        if self._recipe.power == 1:
+            line_hz += residual_hz(sums * unit_phasor(swept[-len(sums) :]), hop_s, _REFINED_HZ)
         newest = float(self._reference.latest(1)[channel, 0])
         reference = newest - line_hz * back_s + 0.5 * found.drift_hz_s * back_s**2
         turned = sums * unit_phasor(-reference[-len(sums) :])

@@ -10,13 +10,12 @@ noise bandwidth comes out as 1 Hz at a C/N0 of 15 dB-Hz and 5.6 Hz at 60.
 from __future__ import annotations
 
 import numpy as np
-from numpy.typing import NDArray
 
-from rxchain.streams import Bools, Floats
+from rxchain.carrier.phasor import unit_phasor
+from rxchain.streams import Bools, ComplexBlock, Floats
 
 JERK = 1.7e-3  # (Hz/s)^2/s
-_PAIR = 2  # hops a step: the filter's bandwidth is far under half the rate of pairs
-_PROMPT_GAIN = 0.19  # memory of the short-term amplitude: ten hops
+_PROMPT_MEMORY_HOPS = 10  # of the short-term amplitude
 _PROMPT_NOISE = 0.1  # twice the share of one hop's noise power that the short-term amplitude carries
 _PHASE_VARIANCE = 0.02  # of a line just found, cycles squared
 _SHIFTED = (_PHASE_VARIANCE, 0.0, 0.0, 1.0, 0.0, 16.0)  # of a line whose frequency was found wrong
@@ -26,18 +25,13 @@ _PULL_PER_S = 2.0  # in fast fading: how quickly the frequency goes to the lag p
 _TINY = 1e-300
 
 
-def unit_phasor(cycles: Floats) -> NDArray[np.complex128]:
-    """Unit phasors of phases in cycles."""
-    phasors: NDArray[np.complex128] = np.exp(2j * np.pi * (cycles - np.floor(cycles)))
-    return phasors
-
-
 class FrequencyFilter:
-    """Phase, frequency and drift of each channel's line, one step every two hops."""
+    """Phase, frequency and drift of each channel's line, one step a quantum: the bandwidth is far under its rate."""
 
-    def __init__(self, n_channels: int, hop_s: float, steepest_hz_s: float) -> None:
-        self._hop_s, self._steepest = hop_s, steepest_hz_s
-        self._before_s = hop_s * (np.arange(_PAIR - 1, -1, -1) + 0.5)
+    def __init__(self, n_channels: int, hops: int, hop_s: float, steepest_hz_s: float) -> None:
+        self._hops, self._step_s, self._steepest = hops, hops * hop_s, steepest_hz_s
+        self._before_s = hop_s * np.arange(hops - 1, -1, -1)  # of each hop, before the newest
+        self._prompt_gain = 1.0 - (1.0 - 1.0 / _PROMPT_MEMORY_HOPS) ** hops
         self.frequency_hz: Floats = np.zeros(n_channels)
         self.drift_hz_s: Floats = np.zeros(n_channels)
         self._phase: Floats = np.zeros(n_channels)
@@ -71,20 +65,19 @@ class FrequencyFilter:
         self.frequency_hz[channels] += shift_hz[channels]
         self._restart(channels, _SHIFTED)
 
-    def follow(self, sums: NDArray[np.complex128], noise: Floats, active: Bools, fast: Bools, lag_hz: Floats) -> Floats:
+    def follow(self, sums: ComplexBlock, noise: Floats, active: Bools, fast: Bools, lag_hz: Floats) -> Floats:
         """Go through a quantum of block sums; the frequency used on the way to each hop, ``(channels, hops)``, Hz.
 
         noise : noise power of one block sum. active : channels with a line to follow.
         fast : where the frequency goes to ``lag_hz``, the lag product's, instead of by the filter.
         """
-        used_hz = np.empty(sums.shape)
         if fast.any():
             self._restart(fast, _FADING)
-        for k in range(0, sums.shape[1], _PAIR):
-            self._predict(fast, lag_hz)
-            # On the way to a hop the frequency was that of half a hop before.
-            used_hz[:, k : k + _PAIR] = self.frequency_hz[:, None] - self.drift_hz_s[:, None] * self._before_s
-            self._correct(sums[:, k : k + _PAIR], noise, active, fast)
+        self._predict(fast, lag_hz)
+        # On the way to a hop the frequency was that of half a hop before.
+        half_hop_s = 0.5 * self._step_s / self._hops
+        used_hz = self.frequency_hz[:, None] - self.drift_hz_s[:, None] * (self._before_s + half_hop_s)
+        self._correct(sums, noise, active, fast)
         return used_hz
 
     def _restart(self, channels: Bools, covariance: tuple[float, ...]) -> None:
@@ -92,7 +85,7 @@ class FrequencyFilter:
             p[channels] = start
 
     def _predict(self, fast: Bools, lag_hz: Floats) -> None:
-        t = _PAIR * self._hop_s
+        t = self._step_s
         p00, p01, p02, p11, p12, p22 = self._p
         p00 = p00 + t * (2.0 * p01 + t * (p02 + p11 + t * (p12 + 0.25 * t * p22)))
         p01 = p01 + t * (p02 + p11 + t * (1.5 * p12 + 0.5 * t * p22))
@@ -105,10 +98,10 @@ class FrequencyFilter:
         self.drift_hz_s *= 1.0 - t * fast
         self.frequency_hz += t * (self.drift_hz_s + _PULL_PER_S * fast * lag_hz)
 
-    def _correct(self, pair: NDArray[np.complex128], noise: Floats, active: Bools, fast: Bools) -> None:
-        back = self._phase[:, None] - self._hop_s * self.frequency_hz[:, None] * np.array([1.0, 0.0])
-        z = np.mean(pair * unit_phasor(-back), axis=1)
-        self._prompt += _PROMPT_GAIN * (z - self._prompt)
+    def _correct(self, sums: ComplexBlock, noise: Floats, active: Bools, fast: Bools) -> None:
+        phase = self._phase[:, None] - self.frequency_hz[:, None] * self._before_s
+        z = np.mean(sums * unit_phasor(-phase), axis=1, dtype=np.complex128)
+        self._prompt += self._prompt_gain * (z - self._prompt)
         power = self._prompt.real**2 + self._prompt.imag**2 - _PROMPT_NOISE * noise
         counts = active & (power > 0.0)
         power = np.maximum(power, _TINY)
@@ -117,7 +110,7 @@ class FrequencyFilter:
         error = np.where(z.real < 0.0, np.copysign(np.maximum(np.abs(error), 0.5), error), error)
         error = np.clip(error, -1.0, 1.0) / (2.0 * np.pi)
         p00, p01, p02, p11, p12, p22 = self._p
-        variance = noise / (_PAIR * 8.0 * np.pi**2) / power
+        variance = noise / (self._hops * 8.0 * np.pi**2) / power
         weight = np.where(counts, 1.0 / (p00 + variance + _TINY), 0.0)
         # In fast fading the phase alone follows, to be right when the filter has its frequency back.
         slow = ~fast

@@ -11,7 +11,7 @@ HOP_S = 64 / 12_000.0
 HOPS_A_QUANTUM = 4
 LOOK_AHEAD_HOPS = 24  # 128 ms: beyond this nothing is gained but in deep fades
 LIVE_LOOK_AHEAD_HOPS = 8  # with the quantum: 64 ms at 12 kHz
-_HOP_MULTIPLE = 8  # the derotation builds a hop's rotation as an outer product of a coarse and a fine part
+_HOP_MULTIPLE = 8  # keeps the lengths of the spectra to small prime factors
 
 
 def hop_samples(rate_hz: float) -> int:

@@ -16,7 +16,7 @@ from rxchain.streams import Bools, Floats
 _ON = 10.0 ** (11.0 / 10.0)
 _OFF = 10.0 ** (7.0 / 10.0)
 _CEILING = 10.0 ** (24.0 / 10.0)  # else a strong carrier's loss would take long to be seen
-_RECENT_ALLOWANCE = 4.0  # so much more the longest window gathers; but a carrier just gone stays in it for a second
+_RECENT_ALLOWANCE = 2.5  # of what the longest window gathers more; a carrier just gone stays in that for a second
 _MEMORY_HOPS = 10.0
 _READY_HOPS = 12.0  # after the look-ahead: the statistic has forgotten how it began
 _COAST_S = 3.0

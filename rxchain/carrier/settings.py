@@ -46,6 +46,7 @@ class Recipe:
     span_hops : length of a block sum's window. Two hops reach +-94 Hz; four keep out a message that begins at 100 Hz.
     half_lengths : the smoother's windows, (future, past), hops; the future is cut to the look-ahead there is.
     stacks : (spectra averaged, contrast asked for in dB): the longer the average, the less is asked for.
+    stack_every : averages are taken at every so manieth spectrum.
     quick_db : a line this far over the mean power about it in two spectra running is taken at once; None: never.
     drift_hz_s : steepest drift of the carrier searched for.
     confirm_s : a line taken up is dropped unless confirmed within this time.
@@ -58,6 +59,7 @@ class Recipe:
     span_hops: int
     half_lengths: tuple[tuple[int, int], ...]
     stacks: tuple[tuple[int, float], ...]
+    stack_every: int
     quick_db: float | None
     drift_hz_s: float
     confirm_s: float
@@ -74,6 +76,7 @@ RECIPES: dict[Follow, Recipe] = {
         span_hops=2,
         half_lengths=((2, 2), *_LONG),
         stacks=((12, 8.5),),
+        stack_every=2,
         quick_db=15.5,
         drift_hz_s=20.0,
         confirm_s=0.8,
@@ -87,6 +90,7 @@ RECIPES: dict[Follow, Recipe] = {
         span_hops=4,
         half_lengths=_LONG,
         stacks=((8, 12.0), (16, 8.5)),
+        stack_every=2,
         quick_db=None,
         drift_hz_s=20.0,
         confirm_s=0.8,
@@ -100,6 +104,7 @@ RECIPES: dict[Follow, Recipe] = {
         span_hops=2,
         half_lengths=((2, 2), *_LONG),
         stacks=((24, 8.0),),
+        stack_every=4,
         quick_db=None,
         drift_hz_s=20.0,
         confirm_s=2.5,
@@ -112,6 +117,7 @@ RECIPES: dict[Follow, Recipe] = {
         span_hops=2,
         half_lengths=_LONG,
         stacks=((32, 7.5),),
+        stack_every=4,
         quick_db=None,
         drift_hz_s=5.0,
         confirm_s=2.5,
