@@ -63,7 +63,7 @@ class MotionWatch:
         if self._fast_fading:
             self._measure_spread(line[:, -1] * self._last.conj(), noise, active)
         self._last = line[:, -1]
-        coherent = np.abs(self._product) > _COHERENT * noise
+        coherent = np.minimum(np.abs(self._product), np.abs(product)) > _COHERENT * noise
         wrong_hz = np.abs(self.lag_hz)
         wrong = active & coherent & (wrong_hz > _WRONG_HZ) & ~self.fast
         self._astray = np.where(wrong, self._astray + wrong_hz * self._quantum_s, 0.0)

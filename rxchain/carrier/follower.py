@@ -46,6 +46,7 @@ __all__ = ["CarrierFollower", "Follower", "FollowerSettings", "NominalFollower",
 
 _LINE_HOPS = 48  # kept of the line's signal: a spectrum, and what the look-ahead is made again from
 _PHASE_HOPS = 12  # a new line's phase is the mean of so many block sums
+_ANY_PHASE = 1.0 / 12.0  # cycles^2: variance of a phase of which nothing is known
 _REFINED_HZ = 6.0  # a bin of the spectra a line is found in
 _STEEPEST = 2.0  # drifts grow no steeper than so many times those searched for
 _LEVEL_GAIN = 0.02  # a quantum: memory of the line's level, 1 s
@@ -235,8 +236,13 @@ class CarrierFollower:
         used_hz[...] = line_hz - found.drift_hz_s * (back_s[-len(used_hz) :] + 0.5 * hop_s)
         mean = np.mean(turned[-_PHASE_HOPS:])
         phase = newest + float(np.angle(mean)) / (2.0 * np.pi)
-        self._filter.start(channel, phase, line_hz, found.drift_hz_s, found.covariance, float(np.abs(mean)))
-        self._noise.start(channel, found.noise_density * self._sums.noise_bandwidth_hz)
+        noise = found.noise_density * self._sums.noise_bandwidth_hz
+        # In a pause of the message there may be no phase to begin with.
+        phase_variance = min(_ANY_PHASE, noise / _PHASE_HOPS / (8.0 * np.pi**2 * float(np.abs(mean)) ** 2 + 1e-300))
+        self._filter.start(
+            channel, phase, line_hz, found.drift_hz_s, phase_variance, found.covariance, float(np.abs(mean))
+        )
+        self._noise.start(channel, noise)
         for part in (self._contest, self._hold, self._watch, self._motion):
             part.start(channel)
         self._level[channel] = float(np.abs(mean))

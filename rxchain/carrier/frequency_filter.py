@@ -17,11 +17,12 @@ from rxchain.streams import Bools, ComplexBlock, Floats
 JERK = 1.7e-3  # (Hz/s)^2/s
 _PROMPT_MEMORY_HOPS = 10  # of the short-term amplitude
 _PROMPT_NOISE = 0.1  # twice the share of one hop's noise power that the short-term amplitude carries
-_PHASE_VARIANCE = 0.02  # of a line just found, cycles squared
+_PHASE_VARIANCE = 0.02  # cycles^2
 _SHIFTED = (_PHASE_VARIANCE, 0.0, 0.0, 1.0, 0.0, 16.0)  # of a line whose frequency was found wrong
 _FADING = (_PHASE_VARIANCE, 0.0, 0.0, 1.0, 0.0, 1.0)  # of a line that fades too fast for the filter
 _PHASE_CEILING = 1.0  # cycles squared: the phase is as good as unknown
 _PULL_PER_S = 2.0  # in fast fading: how quickly the frequency goes to the lag product's
+_CLEAR = 4.0  # a quantum's power over a hop's noise power from which its angle is believed
 _TINY = 1e-300
 
 
@@ -44,15 +45,16 @@ class FrequencyFilter:
         phase_cycles: float,
         frequency_hz: float,
         drift_hz_s: float,
+        phase_variance: float,
         covariance: tuple[float, float, float],
         amplitude: float,
     ) -> None:
-        """Take up a line as it is at the newest hop; the covariance is that of frequency and drift."""
+        """Take up a line as it is at the newest hop; the covariance is that of frequency and drift, variances in cycles^2, Hz^2 ..."""
         self._phase[channel] = phase_cycles
         self.frequency_hz[channel] = frequency_hz
         self.drift_hz_s[channel] = drift_hz_s
         self._prompt[channel] = amplitude
-        for p, start in zip(self._p, (_PHASE_VARIANCE, 0.0, 0.0, *covariance), strict=True):
+        for p, start in zip(self._p, (phase_variance, 0.0, 0.0, *covariance), strict=True):
             p[channel] = start
 
     def stop(self, channels: Bools) -> None:
@@ -105,12 +107,14 @@ class FrequencyFilter:
         power = self._prompt.real**2 + self._prompt.imag**2 - _PROMPT_NOISE * noise
         counts = active & (power > 0.0)
         power = np.maximum(power, _TINY)
-        error = z.imag / np.sqrt(power)
-        # Beyond a quarter turn the quadrature falls again: keep the sign, and at least half a radian.
-        error = np.where(z.real < 0.0, np.copysign(np.maximum(np.abs(error), 0.5), error), error)
-        error = np.clip(error, -1.0, 1.0) / (2.0 * np.pi)
+        # In noise the quadrature is the better measure, up to a radian; clear of it, the angle.
+        quadrature = np.clip(z.imag / np.sqrt(power), -1.0, 1.0)
+        now = z.real**2 + z.imag**2
+        clear = now > _CLEAR * noise
+        error = np.where(clear, np.angle(z), quadrature) / (2.0 * np.pi)
         p00, p01, p02, p11, p12, p22 = self._p
-        variance = noise / (self._hops * 8.0 * np.pi**2) / power
+        # An angle is worth what the line is worth at that moment, be it the edge of a deep fade.
+        variance = noise / (self._hops * 8.0 * np.pi**2) / np.where(clear, np.minimum(power, now), power)
         weight = np.where(counts, 1.0 / (p00 + variance + _TINY), 0.0)
         # In fast fading the phase alone follows, to be right when the filter has its frequency back.
         slow = ~fast
