@@ -67,8 +67,7 @@ def vestigial(side: Side, weight: Weight, band: ComplexTaps, rate_hz: float) -> 
     """
     n_taps = round(_WEIGHT_S * rate_hz) | 1
     length = next_smooth(8 * n_taps, multiple_of=2)
-    # Twice: the real part of a one-sided signal has half the amplitude of the two-sided one it stands for.
-    wanted = 2.0 * weight(np.asarray(np.fft.fftfreq(length, 1.0 / rate_hz), dtype=np.float64))
+    wanted = weight(np.asarray(np.fft.fftfreq(length, 1.0 / rate_hz), dtype=np.float64))
     taps = np.fft.fftshift(np.fft.ifft(wanted))[length // 2 - n_taps // 2 : length // 2 + n_taps // 2 + 1]
     taps = np.convolve(taps * np.kaiser(n_taps, kaiser_beta(_WINDOW_DB)), band)
     return np.asarray(taps if side is Side.UPPER else np.conj(taps), dtype=np.complex128)
