@@ -9,6 +9,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from rxchain.carrier.phasor import unit_phasor
 from rxchain.streams import Bools, Floats
 
 _LAG_MEMORY_S = 0.3
@@ -61,7 +62,9 @@ class MotionWatch:
         self._product += self._gain * (product - self._product)
         self.lag_hz = np.angle(self._product) / (2.0 * np.pi * self._hop_s)
         if self._fast_fading:
-            self._measure_spread(line[:, -1] * self._last.conj(), noise, active)
+            # Less the mean frequency: a line that drifts away is no fading.
+            steady = unit_phasor(-self.lag_hz * self._quantum_s)
+            self._measure_spread(line[:, -1] * self._last.conj() * steady, noise, active)
         self._last = line[:, -1]
         coherent = np.minimum(np.abs(self._product), np.abs(product)) > _COHERENT * noise
         wrong_hz = np.abs(self.lag_hz)

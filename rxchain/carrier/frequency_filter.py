@@ -49,7 +49,7 @@ class FrequencyFilter:
         covariance: tuple[float, float, float],
         amplitude: float,
     ) -> None:
-        """Take up a line as it is at the newest hop; the covariance is that of frequency and drift, variances in cycles^2, Hz^2 ..."""
+        """Take up a line as it is at the newest hop; the covariance is that of frequency and drift."""
         self._phase[channel] = phase_cycles
         self.frequency_hz[channel] = frequency_hz
         self.drift_hz_s[channel] = drift_hz_s
