@@ -15,18 +15,18 @@ def derotate(samples: ComplexBlock, edges_cycles: Floats) -> ComplexBlock:
     The result has the samples' shape and magnitudes.
 
     A hop's rotation is built by doubling: the first half times a power of the step is the second half. So a hop of any
-    length takes two sines and cosines, and its phase is right to 1e-5 rad.
+    length takes two sines and cosines. The powers are kept in float64, as their errors would double with them.
     """
     n_channels, hops = edges_cycles.shape[0], edges_cycles.shape[1] - 1
     hop = samples.shape[1] // hops
     step_cycles = np.diff(edges_cycles, axis=1) / -hop
-    power = unit_phasor(step_cycles)[:, :, None]
+    power = np.exp(2j * np.pi * step_cycles)[:, :, None]
     turn = np.empty((n_channels, hops, hop), np.complex64)
     turn[:, :, 0] = unit_phasor(0.5 * step_cycles - edges_cycles[:, :-1])
     done = 1
     while done < hop:
         more = min(done, hop - done)
-        np.multiply(turn[:, :, :more], power, out=turn[:, :, done : done + more])
+        np.multiply(turn[:, :, :more], power.astype(np.complex64), out=turn[:, :, done : done + more])
         power = power * power
         done += more
     turned = turn.reshape(n_channels, hops * hop)

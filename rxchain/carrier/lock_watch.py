@@ -56,7 +56,7 @@ class LockWatch:
         on = self.active & (self.followed_s > self._ready_s) & (self._statistic > _ON)
         self.locked = on | (alive & self.locked)
         self.confirmed |= self.locked
-        self._weak_s = np.where(alive, 0.0, self._weak_s + self._quantum_s)
+        self._weak_s = np.where(self.locked, 0.0, self._weak_s + self._quantum_s)
         lost = self.confirmed & (self._weak_s > _COAST_S)
         mistaken = ~self.confirmed & (self.followed_s > self._confirm_s)
         given_up = self.active & (lost | mistaken)
