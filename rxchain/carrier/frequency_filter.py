@@ -35,7 +35,7 @@ class FrequencyFilter:
         self._prompt_gain = 1.0 - (1.0 - 1.0 / _PROMPT_MEMORY_HOPS) ** hops
         self.frequency_hz: Floats = np.zeros(n_channels)
         self.drift_hz_s: Floats = np.zeros(n_channels)
-        self._phase: Floats = np.zeros(n_channels)
+        self.phase_cycles: Floats = np.zeros(n_channels)
         self._prompt = np.zeros(n_channels, np.complex128)
         self._p: tuple[Floats, ...] = tuple(np.zeros(n_channels) for _ in range(6))
 
@@ -50,7 +50,7 @@ class FrequencyFilter:
         amplitude: float,
     ) -> None:
         """Take up a line as it is at the newest hop; the covariance is that of frequency and drift."""
-        self._phase[channel] = phase_cycles
+        self.phase_cycles[channel] = phase_cycles
         self.frequency_hz[channel] = frequency_hz
         self.drift_hz_s[channel] = drift_hz_s
         self._prompt[channel] = amplitude
@@ -96,12 +96,12 @@ class FrequencyFilter:
         p12 = p12 + t * p22
         p22 = p22 + JERK * t
         self._p = (p00, p01, p02, p11, p12, p22)
-        self._phase += t * (self.frequency_hz + 0.5 * t * self.drift_hz_s)
+        self.phase_cycles += t * (self.frequency_hz + 0.5 * t * self.drift_hz_s)
         self.drift_hz_s *= 1.0 - t * fast
         self.frequency_hz += t * (self.drift_hz_s + _PULL_PER_S * fast * lag_hz)
 
     def _correct(self, sums: ComplexBlock, noise: Floats, active: Bools, fast: Bools) -> None:
-        phase = self._phase[:, None] - self.frequency_hz[:, None] * self._before_s
+        phase = self.phase_cycles[:, None] - self.frequency_hz[:, None] * self._before_s
         z = np.mean(sums * unit_phasor(-phase), axis=1, dtype=np.complex128)
         self._prompt += self._prompt_gain * (z - self._prompt)
         power = self._prompt.real**2 + self._prompt.imag**2 - _PROMPT_NOISE * noise
@@ -119,7 +119,7 @@ class FrequencyFilter:
         # In fast fading the phase alone follows, to be right when the filter has its frequency back.
         slow = ~fast
         k0, k1, k2 = p00 * weight, p01 * weight * slow, p02 * weight * slow
-        self._phase += k0 * error
+        self.phase_cycles += k0 * error
         self.frequency_hz += k1 * error
         self.drift_hz_s = np.clip(self.drift_hz_s + k2 * error, -self._steepest, self._steepest)
         updated = (p00 - k0 * p00, p01 - k0 * p01, p02 - k0 * p02, p11 - k1 * p01, p12 - k1 * p02, p22 - k2 * p02)

@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 from rxchain.streams import Bools, ComplexBlock, Floats
 
 _KAISER_BETA = 6.0  # stop band 60 dB down
-_TRANSITION = 1.85  # half the transition band, times the length in seconds: F. J. Harris 1978, Kaiser-Bessel
+_TRANSITION = 1.93  # half the transition band times the length in seconds, for that: J. F. Kaiser 1974
 _SPARE_HZ = 60.0
 _RETUNE_HZ = 40.0
 
@@ -28,7 +28,7 @@ class MessageBand:
         self.length = (hops + 2) * hop_samples
         spread_hz = _TRANSITION * rate_hz / (2 * hop_samples + 1)
         self._wide = self._taps(edge_hz + search_hz + spread_hz)
-        self._close = self._taps(edge_hz + _SPARE_HZ + spread_hz)
+        self.close_taps = self._taps(edge_hz + _SPARE_HZ + spread_hz)
         self.bandwidth_hz = min(rate_hz, 2.0 * (edge_hz + _SPARE_HZ + spread_hz))
         self._centre_hz: Floats = np.zeros(n_channels)
         self._is_close: Bools = np.zeros(n_channels, np.bool_)
@@ -52,7 +52,7 @@ class MessageBand:
         if closing.any():
             self._centre_hz = np.where(closing, carrier_hz, self._centre_hz)
             turns = self._centre_hz[closing, None] * np.arange(-self._hop, self._hop + 1) / self._rate_hz
-            taps = self._close * np.exp(2j * np.pi * turns)
+            taps = self.close_taps * np.exp(2j * np.pi * turns)
             self._response[closing] = scipy.fft.fft(taps, self.length, axis=1)
         self._is_close = known.copy()
 

@@ -65,7 +65,9 @@ class WindowContest:
         self._lag, self._hops, self._reach = lag, hops, span - 1
         self._quantum_s = hops * hop_s
         self._gain = 1.0 - (1.0 - hop_s / _MEMORY_S) ** hops
-        self._sharpness = _SHARPNESS_S / hop_s
+        # Overlapped block sums tell less than as many independent ones.
+        alike = 2.0 * float(np.sum(overlap_correlation**2)) - 1.0
+        self._sharpness = _SHARPNESS_S / hop_s / alike
         i = np.arange(-past, lag + 1)
         windows = np.array([_raised_cosine(i, future, back) for future, back in pairs])
         windows /= windows.sum(axis=1, keepdims=True)
@@ -100,6 +102,9 @@ class WindowContest:
         others /= (1.0 - self._middle_weight).astype(np.float32)
         size = np.sqrt(others[0] ** 2 + others[1] ** 2) + _TINY
         across = (middle[1] * others[0] - middle[0] * others[1]) / size
+        # A window too long for the motion may predict a hop upside down, which has no quadrature either.
+        along = middle[0] * others[0] + middle[1] * others[1]
+        across = np.where(along < 0.0, np.sqrt(middle[0] ** 2 + middle[1] ** 2), across)
         power = middle[0, :, :, 0].astype(np.float64) ** 2 + middle[1, :, :, 0].astype(np.float64) ** 2
         present = power > 1e-6 * noise[:, None]
         mix = self._compare(across, present, followed_s)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from pathlib import Path
 
 import numpy as np
@@ -60,7 +61,7 @@ def run(follower: Follower, iq: NDArray[np.complexfloating], cuts: list[int] | N
     """Everything a follower makes of a signal, in one piece."""
     iq = iq.astype(np.complex64)
     edges = [0, *np.cumsum(cuts or [4096] * (iq.shape[1] // 4096)), iq.shape[1]]
-    pieces = [follower.process(iq[:, a:b]) for a, b in zip(edges[:-1], edges[1:], strict=True)]
+    pieces = [follower.process(iq[:, a:b]) for a, b in itertools.pairwise(edges)]
     pieces.append(follower.flush())
     names = ("offset_hz", "phase_cycles", "amplitude", "noise_density", "lock")
     track = Track(*(np.concatenate([getattr(piece.track, name) for piece in pieces], axis=1) for name in names))
