@@ -1,0 +1,153 @@
+"""Depth of modulation: how far the true envelope rises and falls about the mean carrier, noise taken out.
+
+The upright channel's real part over the carrier, less one, is the message; its imaginary part is noise of the same kind.
+A short-time Wiener filter, told by the imaginary part how much noise each bin holds, smooths the message; its peaks are
+then compared with those after the real noise, shaped alike, has been added back: half the difference is what the peak of
+a smoothed programme falls short, the scatter of the draws its uncertainty. Negative peaks beyond 100 % come out by
+themselves, because the real part changes sign where the envelope folds.
+"""
+
+from __future__ import annotations
+
+from collections import deque
+
+import numpy as np
+import scipy.fft
+
+from rxchain.streams import Bools, ComplexBlock, FloatBlock, Floats
+
+_OVERSAMPLING = 4
+_DRAWS = 6
+RECENT_CHUNKS = 12  # about 3 s
+_LATTICE = 32  # fine samples whose highest stands for them when noise is added back
+
+
+class DepthMeter:
+    """Peaks of a group's messages, chunk by chunk; keeps the programme's extremes.
+
+    process(frames, carrier, valid) : upright samples of a chunk in half-overlapping frames, and the carrier's mean
+        amplitude, (channels,).
+    peaks() : positive and negative peak over the carrier with one standard deviation each, (channels,), fractions.
+    """
+
+    def __init__(self, n_channels: int, frame: int, rate_hz: float, bands_hz: list[tuple[float, float]]) -> None:
+        self._frame = frame
+        n = frame // 2 + 1
+        frequency_hz = np.arange(n) * rate_hz / frame
+        self._band = np.array([(frequency_hz >= low) & (frequency_hz <= high) for low, high in bands_hz], np.float32)
+        self._root = np.sqrt(np.hanning(frame + 1)[:-1]).astype(np.float32)
+        self._overlap = np.zeros((2, n_channels, frame // 2 * _OVERSAMPLING), np.float32)
+        self._noise_power = np.zeros((n_channels, n), np.float32)
+        self.reset()
+
+    def reset(self) -> None:
+        """As new, with the same settings."""
+        n = len(self._band)
+        self._overlap[:] = 0
+        self._noise_power[:] = 0
+        # For the positive and the negative side: smoothed peak, mean of the draws at that peak, their scatter.
+        self._best = np.full((2, 3, n), 0.0)
+        self._noise_rms = np.zeros(n)
+        self._any = np.zeros(n, bool)
+        self._latest: deque[Floats] = deque(maxlen=RECENT_CHUNKS)
+
+    def process(self, frames: ComplexBlock, carrier: Floats, valid: Bools) -> None:
+        """A chunk as half-overlapping frames, (channels, frames, samples); channels not ``valid`` are left out."""
+        safe = np.where(valid, carrier, 1.0)
+        scaled = frames * (1.0 / safe)[:, None, None].astype(np.float32)
+        in_phase: ComplexBlock = scipy.fft.rfft((scaled.real - np.float32(1.0)) * self._root, axis=2)
+        in_phase *= self._band[:, None]
+        quadrature: ComplexBlock = scipy.fft.rfft(scaled.imag * self._root, axis=2)
+        quadrature *= self._band[:, None]
+        self._follow_noise(quadrature, valid)
+        noise = self._noise_power[:, None, :] + np.float32(1e-20)
+        power = np.square(in_phase.real) + np.square(in_phase.imag)
+        prior = np.maximum(_smoothed(power) / noise - 1.0, 0.0)
+        gain = (prior / (1.0 + prior)).astype(np.float32)
+        in_phase *= gain
+        quadrature *= np.sqrt(gain)
+        message, shaped = self._joined(0, in_phase), self._joined(1, quadrature)
+        self._noise_rms = np.where(valid, np.std(shaped, axis=1), self._noise_rms)
+        self._keep_extremes(message, shaped, valid)
+        self._any |= valid
+
+    def peaks(self) -> tuple[Floats, Floats, Floats, Floats, Bools]:
+        """Positive peak, its deviation, negative peak, its deviation, and whether there is anything to tell."""
+        sides = []
+        for smooth, drawn, scatter in self._best:
+            value = (smooth + drawn) / 2.0
+            deviation = np.sqrt(
+                (1.3 * scatter) ** 2 + ((drawn - smooth) / 2.0) ** 2 + (0.5 * self._noise_rms) ** 2 + 1e-3**2
+            )
+            sides += [value, deviation]
+        return sides[0], sides[1], sides[2], sides[3], self._any
+
+    def recent_peaks(self) -> tuple[Floats, Floats, Floats, Floats, Bools]:
+        """The same over the last chunks alone."""
+        recent = np.max(self._latest, axis=0) if self._latest else np.zeros_like(self._best[:, 0])
+        kept = self._best
+        self._best = kept.copy()
+        self._best[:, 1] += recent - kept[:, 0]  # what the draws add to a peak is much the same from peak to peak
+        self._best[:, 0] = recent
+        try:
+            return self.peaks()
+        finally:
+            self._best = kept
+
+    def _follow_noise(self, quadrature: ComplexBlock, valid: Bools) -> None:
+        """Noise power of each bin: a slow mean of the quadrature component's, smoothed over nine bins."""
+        power = np.mean(np.square(quadrature.real) + np.square(quadrature.imag), axis=1)
+        padded = np.pad(power, ((0, 0), (4, 4)), mode="edge")
+        smooth = np.cumsum(np.pad(padded, ((0, 0), (1, 0))), axis=1, dtype=np.float64)
+        mean = ((smooth[:, 9:] - smooth[:, :-9]) / 9.0).astype(np.float32)
+        weight = np.where(valid, np.where(self._any, 0.2, 1.0), 0.0).astype(np.float32)[:, None]
+        self._noise_power += weight * (mean - self._noise_power)
+
+    def _joined(self, which: int, spectra: ComplexBlock) -> FloatBlock:
+        """The frames overlapped and added at four times the rate, as far as they are complete."""
+        n_channels, n_frames, _ = spectra.shape
+        fine = self._frame * _OVERSAMPLING
+        half = fine // 2
+        window = np.repeat(self._root, _OVERSAMPLING)
+        pieces = scipy.fft.irfft(spectra, fine, axis=2) * (window * np.float32(_OVERSAMPLING))
+        output = np.zeros((n_channels, (n_frames + 1) * half), np.float32)
+        output[:, :half] = self._overlap[which]
+        firsts = output[:, : n_frames * half].reshape(n_channels, n_frames, half)
+        firsts += pieces[:, :, :half]
+        seconds = output[:, half:].reshape(n_channels, n_frames, half)
+        seconds += pieces[:, :, half:]
+        self._overlap[which] = output[:, n_frames * half :]
+        return output[:, : n_frames * half]
+
+    def _keep_extremes(self, message: FloatBlock, noise: FloatBlock, valid: Bools) -> None:
+        n_channels = len(message)
+        n = message.shape[1] // _LATTICE * _LATTICE
+        cells = message[:, :n].reshape(n_channels, -1, _LATTICE)
+        latest = np.zeros((2, n_channels))
+        for side, sign in enumerate((1.0, -1.0)):
+            highest = cells.max(axis=2) if sign > 0 else -cells.min(axis=2)
+            smooth = highest.max(axis=1)
+            latest[side] = np.where(valid, smooth, 0.0)
+            higher = valid & (smooth > self._best[side, 0])
+            if not higher.any():
+                continue
+            draws = []
+            for k in range(_DRAWS):
+                # Real noise at other times of the same chunk: shifted, and turned over every second time.
+                at = (np.arange(highest.shape[1]) * _LATTICE + (k + 1) * n // (_DRAWS + 1)) % n
+                draws.append((highest + (1 if k % 2 else -1) * noise[:, at]).max(axis=1))
+            drawn = np.array(draws)
+            self._best[side, 0] = np.where(higher, smooth, self._best[side, 0])
+            self._best[side, 1] = np.where(higher, drawn.mean(axis=0), self._best[side, 1])
+            self._best[side, 2] = np.where(higher, drawn.std(axis=0), self._best[side, 2])
+        self._latest.append(latest)
+
+
+def _smoothed(power: FloatBlock) -> FloatBlock:
+    """Mean over three frames and three bins, edges repeated."""
+    in_time = np.pad(power, ((0, 0), (1, 1), (0, 0)), mode="edge")
+    mean = in_time[:, :-2] + in_time[:, 1:-1] + in_time[:, 2:]
+    in_frequency = np.pad(mean, ((0, 0), (0, 0), (1, 1)), mode="edge")
+    smooth = in_frequency[:, :, :-2] + in_frequency[:, :, 1:-1] + in_frequency[:, :, 2:]
+    smooth *= np.float32(1.0 / 9.0)
+    return smooth
