@@ -24,18 +24,26 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         help="a station file (.toml), a SigMF recording, a two-channel WAV, RF64 or FLAC file, "
         "a raw file (.cu8 .cs8 .cs16 .cf32), or rtlsdr[:serial]",
     )
-    parser.add_argument("--channel", action="append", default=[], metavar="TEXT", help="adds a channel; may be repeated")
+    parser.add_argument(
+        "--channel", action="append", default=[], metavar="TEXT", help="adds a channel; may be repeated"
+    )
     parser.add_argument("--out", metavar="DIR", help="folder for audio and summary.json; made if it is not there")
     parser.add_argument(
         "--pace", choices=("live", "fast"), default="fast", help="recordings at their own pace, or as fast as it goes"
     )
     parser.add_argument("--quiet", action="store_true", help="show nothing while receiving")
     parser.add_argument("--rate", metavar="FREQUENCY", help="samples a second, of a raw file or the receiver")
-    parser.add_argument("--centre", metavar="FREQUENCY", help="frequency at the middle, of a file that doesn't say, or to tune to")
-    parser.add_argument("--capture", metavar="N", help="which capture of a recording whose captures lie at different frequencies")
+    parser.add_argument(
+        "--centre", metavar="FREQUENCY", help="frequency at the middle, of a file that doesn't say, or to tune to"
+    )
+    parser.add_argument(
+        "--capture", metavar="N", help="which capture of a recording whose captures lie at different frequencies"
+    )
     parser.add_argument("--gain", metavar="DB", help="receiver's gain in dB; auto (its own) if left out")
     parser.add_argument("--ppm", metavar="N", help="receiver's frequency correction, parts per million")
-    parser.add_argument("--direct-sampling", choices=("i", "q"), metavar="i|q", help="receiver's input that bypasses the tuner")
+    parser.add_argument(
+        "--direct-sampling", choices=("i", "q"), metavar="i|q", help="receiver's input that bypasses the tuner"
+    )
 
 
 def run(arguments: argparse.Namespace) -> int:

@@ -7,11 +7,12 @@ import signal
 import sys
 import threading
 import time
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 from types import FrameType
+from typing import Any
 
 # Small matrix products gain nothing from threads, and threads cost the numeric one its quiet.
 os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
@@ -91,9 +92,9 @@ def receive(request: Request) -> Result:
     return Result(receiver, 130 if outcome.stopped else 0)
 
 
-def _source_options(options: dict[str, str]) -> dict[str, object]:
+def _source_options(options: dict[str, str]) -> dict[str, Any]:
     """The source's keys as numbers."""
-    parsed: dict[str, object] = {}
+    parsed: dict[str, Any] = {}
     for key in ("rate", "centre"):
         if key in options:
             parsed[f"{key}_hz"] = parse_frequency_hz(options[key], key)
@@ -114,13 +115,13 @@ def _source_options(options: dict[str, str]) -> dict[str, object]:
 
 
 @contextmanager
-def _stopped_by_signals(stop: object) -> Iterator[None]:
+def _stopped_by_signals(stop: Callable[[], None]) -> Iterator[None]:
     """The first interrupt or termination asks the run to end, a second interrupt breaks it off."""
-    previous = {}
+    previous: dict[int, Any] = {}
 
     def on_signal(number: int, _: FrameType | None) -> None:
         signal.signal(number, previous[number])
-        stop()  # type: ignore[operator]
+        stop()
 
     if threading.current_thread() is threading.main_thread():
         for number in (signal.SIGINT, signal.SIGTERM):
@@ -128,8 +129,8 @@ def _stopped_by_signals(stop: object) -> Iterator[None]:
     try:
         yield
     finally:
-        for number, handler in previous.items():
-            signal.signal(number, handler)
+        for changed, handler in previous.items():
+            signal.signal(changed, handler)
 
 
 def _lift_allocation_threshold() -> None:
@@ -137,5 +138,4 @@ def _lift_allocation_threshold() -> None:
 
     Without it every transform's buffers are mapped and unmapped anew, which costs as much as the transform.
     """
-    del_me = np.empty(30 << 20, np.uint8)
-    del del_me
+    np.empty(30 << 20, np.uint8)
