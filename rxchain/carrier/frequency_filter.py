@@ -4,7 +4,7 @@ State: phase in cycles, frequency in Hz, drift in Hz/s, driven by white jerk (Y.
 "Estimation with Applications to Tracking and Navigation", 2001, section 6.2.3). The measurement is the quadrature of
 the block sums over the amplitude of the moment, which also sets how much it counts: in a fade or a pause the gain
 falls, the covariance grows, and the frequency is carried on as on a flywheel. No schedule of bandwidths is needed: the
-noise bandwidth comes out as 1 Hz at a C/N0 of 15 dB-Hz and 5.6 Hz at 60.
+noise bandwidth comes out as 0.8 Hz at a C/N0 of 15 dB-Hz and 4.6 Hz at 60.
 """
 
 from __future__ import annotations
@@ -14,7 +14,7 @@ import numpy as np
 from rxchain.carrier.phasor import unit_phasor
 from rxchain.streams import Bools, ComplexBlock, Floats
 
-JERK = 1.7e-3  # (Hz/s)^2/s
+JERK = 5e-4  # (Hz/s)^2/s
 _PROMPT_MEMORY_HOPS = 10  # of the short-term amplitude
 _PROMPT_NOISE = 0.1  # twice the share of one hop's noise power that the short-term amplitude carries
 _PHASE_VARIANCE = 0.02  # cycles^2

@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from rxchain.streams import Floats
 
 _MEMORY_S = 1.0
-_SHARPNESS_S = 0.35  # an excess e of a window's error counts as exp(-e * 0.35 s / hop)
+_SHARPNESS_S = 0.25  # an excess e of a window's error counts as exp(-e * 0.25 s / hop)
 _RECENT_HOPS = 24
 _NARROW_HOPS = 5
 _TINY = np.float32(1e-37)
