@@ -34,7 +34,8 @@ def coherent_taps(channel: ChannelSettings, rate_hz: float, sideband: str | None
             band = both_sidebands(low_hz, high_hz, rate_hz)
             return [band, quarter_turned(band)]
         case "AM-STEREO":
-            return list(left_and_right_taps(both_sidebands(low_hz, high_hz, rate_hz)))
+            # The 25 Hz pilot lies below the message.
+            return list(left_and_right_taps(both_sidebands(low_hz, high_hz, rate_hz, steep=True)))
         case _:
             band = both_sidebands(low_hz, high_hz, rate_hz)
             return [vestigial.vestigial(emission.side or Side.UPPER, _weight(channel), band, rate_hz)]

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 from rxchain.carrier.track import Follow
 from rxchain.chain.channel_settings import AUTO, ChannelSettings
 from rxchain.emissions import Reference
+from rxchain.errors import SettingError
 from rxchain.tuning.plan import BankPlan
 
 # What a channel needs beyond its message's upper edge: the slope of its filters and some mistuning.
@@ -45,7 +46,7 @@ def kind_of(channel: ChannelSettings, plan: BankPlan) -> GroupKind:
     emission = channel.emission
     follow = _FOLLOW[emission.reference]
     return GroupKind(
-        bins=plan.narrowest(half_width_hz(channel)),
+        bins=_bins(channel, plan),
         follow=follow,
         fourth_power=emission.reference is Reference.PILOT_OR_FOURTH_POWER,
         live=channel.delay == "live",
@@ -54,6 +55,20 @@ def kind_of(channel: ChannelSettings, plan: BankPlan) -> GroupKind:
         n_messages=len(emission.messages),
         candidates=candidates_of(channel),
     )
+
+
+def _bins(channel: ChannelSettings, plan: BankPlan) -> int:
+    bins = plan.narrowest(half_width_hz(channel))
+    if bins is None:
+        low_hz, high_hz = channel.audio_hz
+        widest_hz = plan.usable_hz(plan.widths[-1]) - (half_width_hz(channel) - high_hz)
+        raise SettingError(
+            "audio",
+            f"{low_hz:g}-{high_hz:g}Hz",
+            f"the upper edge must be at most {widest_hz:.0f} Hz in a capture of this rate",
+            f"give channel {channel.name} a lower one",
+        )
+    return bins
 
 
 def half_width_hz(channel: ChannelSettings) -> float:

@@ -28,6 +28,7 @@ _LEAD_DB, _ONE_SIDE_LEAD_DB, _AT_ONCE_DB = 0.5, 1.5, 3.0
 _PATIENCE_STEPS = 4
 _DISTORTION_STEPS = 40  # envelope distortion comes in bursts: the largest of the last 10 s counts
 _NOTHING_TO_HEAR_DB = 0.0
+_UNKNOWN_DB = -200.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -108,10 +109,10 @@ class DetectorPicker:
         self._smoothed = np.where(locked[:, None], smoothed, self._smoothed)
         self._is_locked = locked
         rows = np.arange(len(self._channels))
-        filled = np.where(np.isnan(self._smoothed), -np.inf, self._smoothed)
+        filled = np.where(np.isnan(self._smoothed), _UNKNOWN_DB, self._smoothed)
         best = filled.argmax(axis=1).astype(np.int8)
         lead_db = filled[rows, best] - filled[rows, self._now]
-        lead_now_db = present_db[rows, best] - present_db[rows, self._now]
+        lead_now_db = np.nan_to_num(present_db[rows, best] - present_db[rows, self._now])
         wanted_db = np.where(self._is_one_side[rows, best], _ONE_SIDE_LEAD_DB, _LEAD_DB)
         ahead = locked & (lead_db > wanted_db)
         self._leading = np.where(ahead & ((best == self._leader) | (self._leading == 0)), self._leading + 1, 0)

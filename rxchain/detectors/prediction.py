@@ -20,6 +20,7 @@ from rxchain.emissions import Emission
 from rxchain.streams import Bools, ComplexBlock, Floats
 
 _TINY = 1e-30
+_SLOPE_HZ = 300.0
 # Carrier over noise in the short window, below which turning by it would do harm.
 _TRUST_CARRIER = 10.0**2.5
 
@@ -73,6 +74,9 @@ class Predictor:
             n = round(2.0 / low_hz * rate_hz) | 1
             hann = np.hanning(n + 2)[1:-1]
             self._kernels[row, longest // 2 - n // 2 : longest // 2 + n // 2 + 1] = hann / hann.sum()
+        self._rate_hz = rate_hz
+        self._kernel_response = np.zeros((len(channels), 0), np.complex64)
+        self._own_band = np.zeros((len(channels), 0), np.float32)
         self._kernel_noise = rate_hz * (self._kernels**2).sum(axis=1)  # noise bandwidth of the short window, hertz
         frequency_hz = scipy.fft.fftfreq(frame, 1.0 / rate_hz)
         half = frame // 2
@@ -92,10 +96,12 @@ class Predictor:
         n_taps = self._kernels.shape[1]
         middle = window[:, n_taps // 2 : window.shape[1] - n_taps // 2]
         length = scipy.fft.next_fast_len(window.shape[1] + n_taps)
-        spectrum = scipy.fft.fft(window, length, axis=1) * scipy.fft.fft(
-            self._kernels.astype(np.complex64), length, axis=1
-        )
-        carrier = scipy.fft.ifft(spectrum, axis=1)[:, n_taps - 1 : window.shape[1]]
+        spectrum = scipy.fft.fft(window, length, axis=1)
+        if self._kernel_response.shape[1] != length:
+            self._prepare(length)
+        carrier = scipy.fft.ifft(spectrum * self._kernel_response, axis=1)[:, n_taps - 1 : window.shape[1]]
+        # What the envelope detector sees: the emission's own band, and nothing of its neighbours.
+        own = scipy.fft.ifft(spectrum * self._own_band, axis=1)[:, n_taps // 2 : window.shape[1] - n_taps // 2]
         strength = np.abs(carrier)
         mean_carrier = strength.mean(axis=1, dtype=np.float64)
         turn = np.conj(carrier) / np.maximum(strength, _TINY)
@@ -111,7 +117,7 @@ class Predictor:
         trusted: Bools = mean_carrier**2 > _TRUST_CARRIER * floor * self._kernel_noise
         ideal_iq = np.where(trusted[:, None], middle * turn, middle)
         ideal = frames_of(ideal_iq)
-        magnitude = np.abs(middle)
+        magnitude = np.abs(own)
         envelope = frames_of(magnitude - magnitude.mean(axis=1, keepdims=True))
         low, high = ideal[:, :, : len(self._mirror)], np.conj(ideal[:, :, self._mirror])
         real, imaginary = (low + high) / 2.0, (low - high) / 2.0
@@ -141,6 +147,20 @@ class Predictor:
             sinad_db, message, noise, envelope_extra, coherent, upper_noise, lower_noise,
             np.asarray(in_phase.min(axis=1), dtype=np.float64),
         )  # fmt: skip
+
+    def _prepare(self, length: int) -> None:
+        """Responses at a transform's bins: the short window's, and the emission's band with 300 Hz slopes."""
+        self._kernel_response = scipy.fft.fft(self._kernels, length, axis=1).astype(np.complex64)
+        frequency_hz = scipy.fft.fftfreq(length, 1.0 / self._rate_hz)
+        rows = []
+        for channel in self._channels:
+            side, high_hz = int(channel.emission.side or 0), channel.audio_hz[1]
+            beyond_hz = channel.vestige_hz if channel.emission.is_vestigial else 50.0
+            low_hz = -high_hz if side == 0 else -beyond_hz
+            signed = frequency_hz * (side or 1)
+            outside_hz = np.maximum(np.maximum(low_hz - signed, signed - high_hz), 0.0)
+            rows.append(np.cos(np.pi / 2 * np.minimum(outside_hz / _SLOPE_HZ, 1.0)) ** 2)
+        self._own_band = np.array(rows, np.float32)
 
     def _frames(self, samples: NDArray[np.generic]) -> ComplexBlock:
         cut = sliding_window_view(samples, self._frame, axis=1)[:, :: self._frame // 2]

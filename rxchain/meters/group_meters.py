@@ -27,6 +27,7 @@ Peaks: TypeAlias = tuple[Floats, Floats, Floats, Floats, Bools]
 __all__ = ["GroupMeters", "MeteredChannel"]
 
 _CHUNK_HOPS = 48  # 0.26 s
+_BESIDE_HZ = 1_000.0
 _PRESENT_RATIO = 0.2  # message power over noise power, in a chunk, that counts as something being sent
 _HANG_CHUNKS = 6  # a pause of about a second and a half still belongs to the message
 
@@ -45,7 +46,9 @@ class GroupMeters:
         self._chunk = _CHUNK_HOPS * self._hop
         self._frame = 2 * self._chunk // FRAMES
         self._spectra = MessageSpectra(channels, rate_hz, self._frame)
-        self._usable_hz = usable_hz
+        # The floor is looked for near the emission: a recording may have been filtered narrower than its rate.
+        highest_hz = max(channel.audio_hz[1] for channel in channels)
+        self._usable_hz = min(usable_hz, highest_hz + _BESIDE_HZ)
         self._has_depth: Bools = np.array([channel.emission.has_depth for channel in channels])
         self._has_carrier: Bools = np.array(
             [channel.emission.reference is not Reference.NOMINAL for channel in channels]
@@ -153,6 +156,7 @@ class GroupMeters:
         noise = floor[:, None] * self._spectra.noise_bandwidth_hz
         by_quadrature = self._spectra.is_double & locked
         noise[by_quadrature, 0] = messages[by_quadrature, -1]
+        floor = np.where(by_quadrature, noise[:, 0] / np.maximum(self._spectra.noise_bandwidth_hz[:, 0], 1.0), floor)
         chunk.by_quadrature = by_quadrature.astype(np.float64)
         chunk.chunks = valid.astype(np.float64)
         chunk.level = np.mean(np.square(upright.real) + np.square(upright.imag), axis=1, dtype=np.float64)

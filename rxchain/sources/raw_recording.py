@@ -13,7 +13,7 @@ from rxchain.streams import Block
 
 
 class RawRecording:
-    """Samples of a ``.cu8``, ``.cs8``, ``.cs16`` or ``.cf32`` file: unsigned and signed bytes, 16 bit, float; little endian."""
+    """Samples of a ``.cu8``, ``.cs8``, ``.cs16`` or ``.cf32`` file, little endian."""
 
     def __init__(
         self, path: Path, rate_hz: float | None, centre_hz: float | None, block_samples: int | None = None

@@ -49,7 +49,7 @@ class ReceiverSettings:
 
 
 class RtlsdrReceiver:
-    """A stream from the receiver with that serial number, or the first one there is. Its antenna line carries no voltage."""
+    """A stream from the receiver with that serial number, or the first; its antenna line carries no voltage."""
 
     def __init__(self, serial: str | None, settings: ReceiverSettings) -> None:
         if not any(low <= settings.rate_hz <= high for low, high in _RATES_HZ):

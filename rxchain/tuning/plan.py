@@ -65,18 +65,9 @@ class BankPlan:
             return 0.5 * rate_hz  # nothing is decimated: the capture's own edges are the limit
         return rate_hz * (0.5 - kaiser_transition(self.overlap_of(bins) + 1, STOP_DB))
 
-    def narrowest(self, half_width_hz: float) -> int:
-        """The least number of bins whose channels hold ``half_width_hz`` on either side of their middle."""
-        for bins in self.widths:
-            if self.usable_hz(bins) >= half_width_hz:
-                return bins
-        widest_hz = self.usable_hz(self.widths[-1])
-        raise SettingError(
-            "audio",
-            f"{half_width_hz:.0f}Hz",
-            f"a channel of this capture holds at most {widest_hz:.0f} Hz on either side",
-            "lower the upper edge or record at a higher rate",
-        )
+    def narrowest(self, half_width_hz: float) -> int | None:
+        """The least number of bins whose channels hold that much on either side of their middle; None if none does."""
+        return next((bins for bins in self.widths if self.usable_hz(bins) >= half_width_hz), None)
 
 
 def plan_bank(capture_rate_hz: float) -> BankPlan:
