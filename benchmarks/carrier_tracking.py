@@ -33,15 +33,19 @@ Floats = NDArray[np.float64]
 
 @dataclass
 class Run:
+    """What a follower made of a group of channels."""
+
     iq: NDArray[np.complex64]
     track: Track
     hop: int
     bandwidth_hz: Floats
 
     def hop_time_s(self) -> Floats:
+        """Middles of the hops."""
         return ((np.arange(self.track.lock.shape[1]) + 0.5) * self.hop - 0.5) / RATE_HZ
 
     def first_lock_s(self) -> Floats:
+        """Start of each channel's first locked hop; infinity where there is none."""
         locked = self.track.lock == Lock.LOCKED
         first = locked.argmax(axis=1) * self.hop / RATE_HZ
         return np.where(locked.any(axis=1), first, np.inf)
@@ -108,6 +112,11 @@ def carriers(
 
 def rms(values: Floats, axis: int = 1) -> Floats:
     return np.sqrt(np.mean(values**2, axis=axis))
+
+
+def hop_power(message: Floats, run: Run) -> Floats:
+    padded = np.pad(message**2, ((0, 0), (0, run.track.lock.shape[1] * run.hop - message.shape[1])))
+    return padded.reshape(CHANNELS, -1, run.hop).mean(axis=2)
 
 
 def row(*cells: object) -> None:
@@ -268,11 +277,7 @@ def suppressed() -> None:
                 run = follow(iq, FollowerSettings(Follow.SQUARE, message_hz=(low_hz, high_hz)))
                 t = run.hop_time_s()
                 late = (t > 3.5) & (t < 15.5)
-                hops = late.sum()
-                power = message[:, : len(t) * run.hop].reshape(CHANNELS, -1, run.hop)[:, :hops] if False else None
-                squared = np.resize(message**2, (CHANNELS, len(t) * run.hop)) if False else message**2
-                padded = np.pad(squared, ((0, 0), (0, len(t) * run.hop - squared.shape[1])))
-                power = padded.reshape(CHANNELS, -1, run.hop).mean(axis=2)[:, late]
+                power = hop_power(message, run)[:, late]
                 folded = run.phase_error_deg(phase, 2)[:, late]
                 error = np.sqrt(np.sum(power * folded**2, axis=1) / power.sum(axis=1))
                 whole = run.phase_error_deg(phase)[:, late]
@@ -307,8 +312,7 @@ def fades() -> None:
             run = follow(iq, FollowerSettings(Follow.SQUARE, message_hz=(100.0, 4500.0)))
             hop_t = run.hop_time_s()
             error = run.phase_error_deg(phase)
-            padded = np.pad(message**2, ((0, 0), (0, len(hop_t) * run.hop - message.shape[1])))
-            loud = padded.reshape(CHANNELS, -1, run.hop).mean(axis=2)
+            loud = hop_power(message, run)
             turned = 0
             for c in range(CHANNELS):
                 before = np.angle(np.sum((loud[c] * np.exp(1j * np.radians(error[c])))[(hop_t > 5.5) & (hop_t < 6.9)]))

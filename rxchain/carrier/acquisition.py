@@ -35,7 +35,6 @@ class Found:
     line_hz, drift_hz_s : its frequency at the newest sample, and its drift.
     covariance : of the two: Hz^2, Hz^2/s, (Hz/s)^2.
     noise_density : noise per hertz about it.
-    quick : found in two spectra only, its drift not known at all.
     """
 
     channel: int
@@ -43,7 +42,6 @@ class Found:
     drift_hz_s: float
     covariance: tuple[float, float, float]
     noise_density: float
-    quick: bool
 
 
 class Acquisition:
@@ -118,7 +116,7 @@ class Acquisition:
         for i in np.flatnonzero(clear):
             place, _ = peak_bins(last[i], margin + int(peak[i]), 1)
             channel, density = int(channels[i]), _density(float(np.mean(last[i])))
-            found[channel] = Found(channel, self._line_hz(place), 0.0, _QUICK_COVARIANCE, density, quick=True)
+            found[channel] = Found(channel, self._line_hz(place), 0.0, _QUICK_COVARIANCE, density)
         return found
 
     def _slow(self, channels: Counts) -> dict[int, Found]:
@@ -154,7 +152,7 @@ class Acquisition:
             drift_unit**2 * fit.drift_variance,
         )
         line_hz, drift_hz_s = self._line_hz(fit.position_bins), fit.drift_bins * drift_unit
-        return Found(channel, line_hz, drift_hz_s, covariance, _density(around_db), quick=False)
+        return Found(channel, line_hz, drift_hz_s, covariance, _density(around_db))
 
     def _line_hz(self, place: float) -> float:
         return (place - len(self._taken) // 2) * self._bin_hz

@@ -27,6 +27,7 @@ from rxchain.carrier.fading import MotionWatch
 from rxchain.carrier.frequency_filter import FrequencyFilter
 from rxchain.carrier.history import History
 from rxchain.carrier.hops import HOPS_A_QUANTUM, LIVE_LOOK_AHEAD_HOPS, LOOK_AHEAD_HOPS, hop_samples
+from rxchain.carrier.joining import beginning, join
 from rxchain.carrier.line_choice import LineChoice
 from rxchain.carrier.line_fit import residual_hz
 from rxchain.carrier.lock_watch import LockWatch
@@ -162,7 +163,7 @@ class CarrierFollower:
         whole = samples.shape[1] // self._quantum * self._quantum
         pieces = [self._advance(samples[:, k : k + self._quantum]) for k in range(0, whole, self._quantum)]
         self._waiting = samples[:, whole:].astype(np.complex64)
-        turned = self._join([piece for piece in pieces if piece is not None])
+        turned = join([piece for piece in pieces if piece is not None], self._n_channels, self.hop_samples)
         self._delivered += turned.iq.shape[1]
         return turned
 
@@ -174,8 +175,7 @@ class CarrierFollower:
         silence += -(short + silence) % self._quantum
         turned = self.process(np.zeros((self._n_channels, silence), np.complex64))
         self.reset()
-        hops = -(-missing // self.hop_samples)
-        return Turned(turned.iq[:, :missing], _first_hops(turned.track, hops), self.hop_samples)
+        return beginning(turned, missing)
 
     def _advance(self, block: ComplexBlock) -> Turned | None:
         recipe, hop = self._recipe, self.hop_samples
@@ -290,31 +290,3 @@ class CarrierFollower:
         )
         oldest = self._samples.latest(self._quantum, ago=self._look_hops * self.hop_samples)
         return Turned(derotate(oldest, edges), track, self.hop_samples)
-
-    def _join(self, pieces: list[Turned]) -> Turned:
-        n, hop = self._n_channels, self.hop_samples
-        if len(pieces) == 1:
-            return pieces[0]
-        if not pieces:
-            nothing = np.zeros((n, 0))
-            track = Track(nothing, nothing, nothing, nothing, np.zeros((n, 0), np.int8))
-            return Turned(np.zeros((n, 0), np.complex64), track, hop)
-        tracks = [piece.track for piece in pieces]
-        track = Track(
-            offset_hz=np.concatenate([t.offset_hz for t in tracks], axis=1),
-            phase_cycles=np.concatenate([t.phase_cycles for t in tracks], axis=1),
-            amplitude=np.concatenate([t.amplitude for t in tracks], axis=1),
-            noise_density=np.concatenate([t.noise_density for t in tracks], axis=1),
-            lock=np.concatenate([t.lock for t in tracks], axis=1),
-        )
-        return Turned(np.concatenate([piece.iq for piece in pieces], axis=1), track, hop)
-
-
-def _first_hops(track: Track, hops: int) -> Track:
-    return Track(
-        offset_hz=track.offset_hz[:, :hops],
-        phase_cycles=track.phase_cycles[:, :hops],
-        amplitude=track.amplitude[:, :hops],
-        noise_density=track.noise_density[:, :hops],
-        lock=track.lock[:, :hops],
-    )

@@ -7,7 +7,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import DTypeLike, NDArray
 
-_ROOM = 6  # lengths of room: the stretch is moved back to the start once in so many lengths
+_ROOM = 4  # lengths of room: the stretch is moved back to the start once in so many lengths
 
 
 class History:

@@ -7,6 +7,7 @@ from numpy.typing import NDArray
 
 from rxchain.carrier.derotation import derotate
 from rxchain.carrier.hops import hop_samples
+from rxchain.carrier.joining import beginning
 from rxchain.carrier.track import Lock, Track, Turned
 from rxchain.errors import SettingError
 from rxchain.streams import ComplexBlock, Floats
@@ -64,7 +65,7 @@ class NominalFollower:
         padded = np.pad(rest, ((0, 0), (0, -short % self.hop_samples)))
         turned = self._turn(padded)
         self.reset()
-        return Turned(turned.iq[:, :short], turned.track, self.hop_samples)
+        return beginning(turned, short)
 
     def _turn(self, samples: ComplexBlock) -> Turned:
         hops = samples.shape[1] // self.hop_samples
