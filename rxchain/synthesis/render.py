@@ -151,11 +151,20 @@ def noise_bandwidth_hz(station: Station) -> float:
     return float(np.mean(1.0 / (gain**2 + mirrored**2)) * width_hz / 2.0)
 
 
+def quantisation_density(scene: Scene) -> float:
+    """Noise per hertz that rounding to the capture's format adds: a twelfth of a step squared in each component."""
+    step = {"cf32_le": 0.0, "ci16_le": 1.0 / 32768.0, "ci8": 1.0 / 128.0, "cu8": 1.0 / 127.5}[scene.format]
+    return 2.0 * step**2 / 12.0 / scene.rate_hz
+
+
 def _snr_db(scene: Scene, station: Station, messages: Floats) -> tuple[float, ...] | None:
     if scene.noise_dbfs_hz is None or messages.shape[1] == 0:
         return None
-    noise = 10.0 ** (scene.noise_dbfs_hz / 10.0) * noise_bandwidth_hz(station)
+    density = 10.0 ** (scene.noise_dbfs_hz / 10.0) + quantisation_density(scene)
+    noise = density * noise_bandwidth_hz(station)
     power = np.mean(messages**2, axis=1)
+    if station.emission.family == "A1A":
+        power = power / 2.0  # what is heard is a note of the keying's amplitude
     return tuple(float(10.0 * np.log10(max(one, 1e-30) / noise)) for one in power)
 
 
