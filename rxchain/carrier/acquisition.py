@@ -9,23 +9,19 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-import scipy.fft
 from numpy.typing import NDArray
 
-from rxchain.carrier.block_sums import hann
 from rxchain.carrier.line_choice import LineChoice
 from rxchain.carrier.line_fit import fit_line, peak_bins
+from rxchain.carrier.line_spectra import LineSpectra
 from rxchain.carrier.settings import Recipe
 from rxchain.carrier.slant_stack import SlantStack, Stacked
 from rxchain.streams import Bools, ComplexBlock, Counts, Floats
 
-SPECTRUM_HOPS = 32
-EVERY_HOPS = 16
 _AROUND_HZ = 100.0
 _QUICK_FALL_DB = 3.0  # what a quick line may have gained since the spectrum before
 _LOG_MEAN_DB = 2.51  # mean power over mean log power of noise: Euler's constant in dB
-_QUICK_COVARIANCE = (1.0, 0.0, 100.0)  # the drift may be any that is searched for
-_FLOOR = np.float32(1e-37)
+QUICK_COVARIANCE = (1.0, 0.0, 100.0)  # the drift may be any that is searched for
 
 
 @dataclass(frozen=True, slots=True)
@@ -47,24 +43,16 @@ class Found:
 class Acquisition:
     """Spectra of the channels that search, and the lines found in them."""
 
-    def __init__(self, n_channels: int, rate_hz: float, hop_samples: int, recipe: Recipe, choice: LineChoice) -> None:
+    def __init__(self, n_channels: int, spectra: LineSpectra, recipe: Recipe, choice: LineChoice) -> None:
         self._recipe, self._choice = recipe, choice
-        self.length = SPECTRUM_HOPS * hop_samples
-        self._bin_hz = rate_hz / self.length
-        self._every_s = EVERY_HOPS * hop_samples / rate_hz
-        search_hz = min(choice.search_hz, 0.5 * rate_hz)
-        half = min(round(search_hz / self._bin_hz), self.length // 2 - 1)
+        self._spectra, self._bin_hz, self._every_s = spectra, spectra.bin_hz, spectra.every_s
         self._stack = SlantStack(
-            bins=2 * half + 1,
+            bins=2 * spectra.half + 1,
             around_bins=max(5, round(_AROUND_HZ / self._bin_hz)),
             drift_bins=recipe.drift_hz_s * recipe.power * self._every_s / self._bin_hz,
-            spectra=tuple(spectra for spectra, _ in recipe.stacks),
+            spectra=tuple(length for length, _ in recipe.stacks),
         )
-        self._offsets_hz: Floats = self._bin_hz * np.arange(-half, half + 1, dtype=np.float64)
-        reach = half + self._stack.margin
-        self._taken = np.arange(-reach, reach + 1) % self.length
-        window = hann(self.length)
-        self._window = (window / np.sqrt(np.sum(window**2) * rate_hz)).astype(np.float32)
+        self._offsets_hz: Floats = self._bin_hz * np.arange(-spectra.half, spectra.half + 1, dtype=np.float64)
         self._kept = max(2, *(spectra for spectra, _ in recipe.stacks))
         self._log = np.zeros((self._kept, n_channels, self._stack.width), np.float32)
         self._newest = 0
@@ -85,9 +73,7 @@ class Acquisition:
         which = np.flatnonzero(searching)
         if not len(which):
             return []
-        spectrum = np.asarray(scipy.fft.fft(samples[which] * self._window, axis=1))[:, self._taken]
-        power = spectrum.real**2 + spectrum.imag**2
-        self._log[self._newest, which] = np.float32(10.0) * np.log10(power + _FLOOR)
+        self._log[self._newest, which] = self._spectra.levels_db(samples[which], self._stack.margin)
         free_channels = np.flatnonzero(free & searching & (self._seen >= 2))
         quick_db = self._recipe.quick_db
         found = self._quick(free_channels, quick_db) if quick_db is not None and len(free_channels) else {}
@@ -98,12 +84,12 @@ class Acquisition:
             found |= self._slow(ready)
         return list(found.values())
 
-    def _spectra(self, channels: Counts, n: int) -> list[NDArray[np.float32]]:
+    def _newest_first(self, channels: Counts, n: int) -> list[NDArray[np.float32]]:
         order = (self._newest + np.arange(n)) % self._kept
         return [self._log[k, channels] for k in order]
 
     def _quick(self, channels: Counts, quick_db: float) -> dict[int, Found]:
-        last, before = self._spectra(channels, 2)
+        last, before = self._newest_first(channels, 2)
         margin, bins = self._stack.margin, len(self._offsets_hz)
         searched = last[:, margin : margin + bins]
         peak = searched.argmax(axis=1)
@@ -116,12 +102,12 @@ class Acquisition:
         for i in np.flatnonzero(clear):
             place, _ = peak_bins(last[i], margin + int(peak[i]), 1)
             channel, density = int(channels[i]), _density(float(np.mean(last[i])))
-            found[channel] = Found(channel, self._line_hz(place), 0.0, _QUICK_COVARIANCE, density)
+            found[channel] = Found(channel, self._line_hz(place), 0.0, QUICK_COVARIANCE, density)
         return found
 
     def _slow(self, channels: Counts) -> dict[int, Found]:
         longest = int(min(self._kept, self._seen[channels].max()))
-        newest_first = self._spectra(channels, longest)
+        newest_first = self._newest_first(channels, longest)
         stacks = self._stack.stack(newest_first)
         found: dict[int, Found] = {}
         for spectra, contrast_db in self._recipe.stacks:
@@ -155,7 +141,7 @@ class Acquisition:
         return Found(channel, line_hz, drift_hz_s, covariance, _density(around_db))
 
     def _line_hz(self, place: float) -> float:
-        return (place - len(self._taken) // 2) * self._bin_hz
+        return (place - self._stack.width // 2) * self._bin_hz
 
 
 def _density(mean_log_db: float) -> float:

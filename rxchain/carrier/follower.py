@@ -20,16 +20,24 @@ from typing import Protocol
 
 import numpy as np
 
-from rxchain.carrier.acquisition import EVERY_HOPS, SPECTRUM_HOPS, Acquisition, Found
+from rxchain.carrier.acquisition import Acquisition, Found
 from rxchain.carrier.block_sums import BlockSums
 from rxchain.carrier.derotation import derotate
 from rxchain.carrier.fading import MotionWatch
 from rxchain.carrier.frequency_filter import FrequencyFilter
 from rxchain.carrier.history import History
-from rxchain.carrier.hops import HOPS_A_QUANTUM, LIVE_LOOK_AHEAD_HOPS, LOOK_AHEAD_HOPS, hop_samples
+from rxchain.carrier.hops import (
+    EVERY_HOPS,
+    HOPS_A_QUANTUM,
+    LIVE_LOOK_AHEAD_HOPS,
+    LOOK_AHEAD_HOPS,
+    SPECTRUM_HOPS,
+    hop_samples,
+)
 from rxchain.carrier.joining import beginning, join
 from rxchain.carrier.line_choice import LineChoice
 from rxchain.carrier.line_fit import residual_hz
+from rxchain.carrier.line_spectra import LineSpectra
 from rxchain.carrier.lock_watch import LockWatch
 from rxchain.carrier.message_band import MessageBand
 from rxchain.carrier.nominal import NominalFollower
@@ -38,6 +46,7 @@ from rxchain.carrier.phasor import unit_phasor
 from rxchain.carrier.power_law import line_amplitude, line_signal, signal_noise_density
 from rxchain.carrier.quadrature_noise import QuadratureNoise
 from rxchain.carrier.settings import RECIPES, FollowerSettings
+from rxchain.carrier.takeover import Takeover
 from rxchain.carrier.track import Follow, Lock, Track, Turned
 from rxchain.carrier.window_contest import Smoothed, WindowContest
 from rxchain.errors import SettingError
@@ -131,10 +140,10 @@ class CarrierFollower:
         self._quanta = 0
         self._taken_in = self._delivered = 0
         self._sums = BlockSums(n, self._rate_hz, self.hop_samples, recipe.span_hops)
-        choice = LineChoice(
-            self.settings.follow, recipe.power * self.settings.search_hz, self.settings.message_hz, self._sides
-        )
-        self._acquisition = Acquisition(n, self._rate_hz, self.hop_samples, recipe, choice)
+        choice = LineChoice(self.settings.follow, self.settings.message_hz, self._sides)
+        self._spectra = LineSpectra(self._rate_hz, self.hop_samples, recipe.power * self.settings.search_hz)
+        self._acquisition = Acquisition(n, self._spectra, recipe, choice)
+        self._takeover = Takeover(n, self._spectra)
         self._filter = FrequencyFilter(n, quantum, hop_s, _STEEPEST * recipe.power * recipe.drift_hz_s)
         self._contest = WindowContest(n, recipe.half_lengths, self._lag, quantum, hop_s, self._sums.overlap_correlation)
         self._noise = QuadratureNoise(n, recipe.span_hops, quantum, hop_s, recipe.hold_s)
@@ -187,12 +196,8 @@ class CarrierFollower:
             banded = self._band.filter(self._samples.latest(self._band.length))
             self._line.push(line_signal(banded, recipe.power))
         hops = self._quanta * HOPS_A_QUANTUM
-        if hops >= SPECTRUM_HOPS and hops % EVERY_HOPS == 0 and not self._watch.confirmed.all():
-            searching = ~(self._watch.active & self._watch.confirmed)
-            for found in self._acquisition.search(
-                self._line.latest(self._acquisition.length), searching, ~self._watch.active
-            ):
-                self._take_up(found)
+        if hops >= SPECTRUM_HOPS and hops % EVERY_HOPS == 0:
+            self._search()
         self._sums.retune(self._filter.frequency_hz)
         sums = self._sums.sums(self._line.latest(self._quantum + (recipe.span_hops - 1) * hop))
         self._push_blocks(sums)
@@ -200,6 +205,14 @@ class CarrierFollower:
             self._blocks.latest(self._contest.length), self._noise.power, self._watch.followed_s
         )
         return self._turn(smoothed)
+
+    def _search(self) -> None:
+        newest, followed = self._line.latest(self._spectra.length), self._watch.active & self._watch.confirmed
+        lines = self._acquisition.search(newest, ~followed, ~self._watch.active)
+        if self.settings.follow is Follow.CARRIER:
+            lines += self._takeover.look(newest, followed, self._level, self._filter.frequency_hz)
+        for found in lines:
+            self._take_up(found)
 
     def _push_blocks(self, sums: ComplexBlock) -> None:
         used_hz = self._filter.follow(
@@ -243,7 +256,7 @@ class CarrierFollower:
             channel, phase, line_hz, found.drift_hz_s, phase_variance, found.covariance, float(np.abs(mean))
         )
         self._noise.start(channel, noise)
-        for part in (self._contest, self._hold, self._watch, self._motion):
+        for part in (self._contest, self._hold, self._watch, self._motion, self._takeover):
             part.start(channel)
         self._level[channel] = float(np.abs(mean))
 

@@ -11,6 +11,8 @@ HOP_S = 64 / 12_000.0
 HOPS_A_QUANTUM = 4
 LOOK_AHEAD_HOPS = 24  # 128 ms: beyond this nothing is gained but in deep fades
 LIVE_LOOK_AHEAD_HOPS = 8  # with the quantum: 64 ms at 12 kHz
+SPECTRUM_HOPS = 32  # length of a spectrum in which lines are searched
+EVERY_HOPS = 16  # from one spectrum to the next
 _HOP_MULTIPLE = 8  # keeps the lengths of the spectra to small prime factors
 
 

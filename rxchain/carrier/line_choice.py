@@ -22,12 +22,10 @@ _NEAR_PEERS_DB = 10.0  # lines weaker than this against the strongest left are n
 class LineChoice:
     """The rule of one kind of following.
 
-    search_hz : half-width of the search in the spectrum of the power followed.
     sides : for a pilot, where each channel's message lies: +1 above, -1 below, 0 both sides.
     """
 
-    def __init__(self, follow: Follow, search_hz: float, message_hz: tuple[float, float], sides: Sequence[int]) -> None:
-        self.search_hz = search_hz
+    def __init__(self, follow: Follow, message_hz: tuple[float, float], sides: Sequence[int]) -> None:
         self._follow = follow
         self._message_hz = message_hz
         self._sides = tuple(sides)

@@ -172,7 +172,7 @@ def test_a_message_tone_is_not_taken_for_the_pilot() -> None:
         levels = level_db.copy()
         for line_hz, height_db in lines.items():
             levels[place(line_hz)] = height_db
-        choice = LineChoice(kind, 500.0, (300.0, 2700.0), [side])
+        choice = LineChoice(kind, (300.0, 2700.0), [side])
         return float(offsets_hz[choice.choose(0, offsets_hz, levels, levels, 8.0)])
 
     near = 3.0  # half a bin
