@@ -143,7 +143,7 @@ class CarrierFollower:
         choice = LineChoice(self.settings.follow, self.settings.message_hz, self._sides)
         self._spectra = LineSpectra(self._rate_hz, self.hop_samples, recipe.power * self.settings.search_hz)
         self._acquisition = Acquisition(n, self._spectra, recipe, choice)
-        self._takeover = Takeover(n, self._spectra)
+        self._takeover = Takeover(n, self._spectra, choice)
         self._filter = FrequencyFilter(n, quantum, hop_s, _STEEPEST * recipe.power * recipe.drift_hz_s)
         self._contest = WindowContest(n, recipe.half_lengths, self._lag, quantum, hop_s, self._sums.overlap_correlation)
         self._noise = QuadratureNoise(n, recipe.span_hops, quantum, hop_s, recipe.hold_s)
@@ -209,7 +209,7 @@ class CarrierFollower:
     def _search(self) -> None:
         newest, followed = self._line.latest(self._spectra.length), self._watch.active & self._watch.confirmed
         lines = self._acquisition.search(newest, ~followed, ~self._watch.active)
-        if self.settings.follow is Follow.CARRIER:
+        if self._recipe.power == 1:
             lines += self._takeover.look(newest, followed, self._level, self._filter.frequency_hz)
         for found in lines:
             self._take_up(found)

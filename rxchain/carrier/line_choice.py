@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from rxchain.carrier.track import Follow
-from rxchain.streams import Bools, Floats
+from rxchain.streams import Bools, Counts, Floats
 
 _SLACK_HZ = 12.0  # two bins: a line's place is known no better
 _NEAR_PEERS_DB = 10.0  # lines weaker than this against the strongest left are not taken for the pilot
@@ -28,7 +28,7 @@ class LineChoice:
     def __init__(self, follow: Follow, message_hz: tuple[float, float], sides: Sequence[int]) -> None:
         self._follow = follow
         self._message_hz = message_hz
-        self._sides = tuple(sides)
+        self._sides: Counts = np.array(sides, np.int64)
 
     def choose(
         self,
@@ -46,15 +46,24 @@ class LineChoice:
             return int(np.argmax(contrast_db))
         lines = np.flatnonzero(_peaks(contrast_db, passing))
         if self._sides[channel] != 0:
-            lines = lines[self._unexplained(offsets_hz[lines], self._sides[channel])]
+            lines = lines[self._unexplained(offsets_hz[lines], channel)]
             lines = lines[level_db[lines] > level_db[lines].max() - _NEAR_PEERS_DB]
         return int(lines[np.argmin(np.abs(offsets_hz[lines]))])
 
-    def _unexplained(self, lines_hz: Floats, side: int) -> Bools:
-        """Lines that do not lie in the message of any other line; all of them where that leaves none."""
+    def in_message(self, channels: Counts, beyond_hz: Floats) -> Bools:
+        """Whether lines that lie so far above each channel's pilot would belong to its message."""
+        if self._follow is not Follow.PILOT:
+            return np.zeros(np.shape(beyond_hz), np.bool_)
+        side = self._sides[channels]
+        distance_hz = np.where(side == 0, np.abs(beyond_hz), side * beyond_hz)
         low_hz, high_hz = self._message_hz
-        beyond_hz = side * (lines_hz[:, None] - lines_hz[None, :])
-        inside = (beyond_hz > low_hz - _SLACK_HZ) & (beyond_hz < high_hz + _SLACK_HZ) & (beyond_hz > _SLACK_HZ)
+        inside: Bools = (distance_hz > max(low_hz - _SLACK_HZ, _SLACK_HZ)) & (distance_hz < high_hz + _SLACK_HZ)
+        return inside
+
+    def _unexplained(self, lines_hz: Floats, channel: int) -> Bools:
+        """Lines that do not lie in the message of any other line; all of them where that leaves none."""
+        beyond_hz = lines_hz[:, None] - lines_hz[None, :]
+        inside = self.in_message(np.full(beyond_hz.shape, channel), beyond_hz)
         alone: Bools = np.logical_not(np.any(inside, axis=1))
         return alone if np.any(alone) else np.ones(len(lines_hz), np.bool_)
 

@@ -1,9 +1,9 @@
-"""Notice that a carrier much stronger than the one followed has come up in the channel.
+"""Notice that a line much stronger than the carrier or pilot followed has come up.
 
-A receiver that waits on a quiet channel may hold on to some weak spurious line. Each channel that follows a carrier is
-looked at now and then; a line that stands far over the carrier, as strong as that has been in the last seconds, is
-taken up if it is still there at the next look. (In a selective fade the sidebands outgrow the carrier, but not the
-carrier as it was.)
+A receiver that waits on a quiet channel may hold on to some weak spurious line. Each channel that follows a line is
+looked at now and then; another that stands far over it, as strong as it has been in the last half minute, is taken up
+if it is still there at the next look, unless it would lie in the message of the pilot followed. In a selective fade the
+sidebands outgrow the carrier, but not the carrier as it was.
 """
 
 from __future__ import annotations
@@ -11,6 +11,7 @@ from __future__ import annotations
 import numpy as np
 
 from rxchain.carrier.acquisition import QUICK_COVARIANCE, Found
+from rxchain.carrier.line_choice import LineChoice
 from rxchain.carrier.line_fit import peak_bins
 from rxchain.carrier.line_spectra import LineSpectra
 from rxchain.streams import Bools, ComplexBlock, Counts, Floats
@@ -18,15 +19,15 @@ from rxchain.streams import Bools, ComplexBlock, Counts, Floats
 _TURNS = 8  # a channel's turn comes at every so manieth spectrum
 _STRONGER = 4.0  # power: 6 dB
 _CLEAR_DB = 15.5  # over the mean of the band, as for any line taken up quickly
-_MEMORY_S = 10.0  # of how strong the carrier has been
+_MEMORY_S = 30.0  # of how strong the carrier has been
 _SAME_BINS = 3
 
 
 class Takeover:
     """The carriers' strength, and the channels under suspicion."""
 
-    def __init__(self, n_channels: int, spectra: LineSpectra) -> None:
-        self._spectra = spectra
+    def __init__(self, n_channels: int, spectra: LineSpectra, choice: LineChoice) -> None:
+        self._spectra, self._choice = spectra, choice
         self._turn = 0
         self._suspect: Counts = np.full(n_channels, -1, np.int64)  # bin of the stronger line; -1: none
         self._strongest: Floats = np.zeros(n_channels)
@@ -53,7 +54,9 @@ class Takeover:
         height_db = levels_db[np.arange(len(channels)), peak]
         needed = _STRONGER * self._spectra.density_of(self._strongest[channels] ** 2)
         place_hz = (peak - self._spectra.half - 1) * self._spectra.bin_hz
-        elsewhere = np.abs(place_hz - line_hz[channels]) > _SAME_BINS * self._spectra.bin_hz
+        beyond_hz = place_hz - line_hz[channels]
+        elsewhere = np.abs(beyond_hz) > _SAME_BINS * self._spectra.bin_hz
+        elsewhere &= ~self._choice.in_message(channels, beyond_hz)
         mean_db = levels_db.mean(axis=1)
         stronger = elsewhere & (height_db > 10.0 * np.log10(needed + 1e-37)) & (height_db > mean_db + _CLEAR_DB)
         again = stronger & (np.abs(peak - self._suspect[channels]) <= 1)

@@ -345,6 +345,35 @@ def test_a_steady_tone_stronger_than_the_pilot_is_not_taken_for_it(side: int, to
     assert np.abs(turned.track.offset_hz[:, -60:-30] - offset_hz).max() < 0.5
 
 
+@pytest.mark.parametrize("kind", [Follow.CARRIER, Follow.PILOT])
+@pytest.mark.parametrize("stronger_db", [12.0, 40.0])
+def test_a_much_stronger_carrier_takes_over_from_a_spurious_line(kind: Follow, stronger_db: float) -> None:
+    rng = np.random.default_rng(32)
+    t = np.arange(int(5 * RATE_HZ)) / RATE_HZ
+    spurious = AMPLITUDE / 10 ** (stronger_db / 20)
+    iq = spurious * np.exp(2j * np.pi * 240.0 * t) + AMPLITUDE * np.exp(2j * np.pi * -35.0 * t) * (t > 2.5)
+    iq = iq + white(rng, 9, len(t), spurious**2 / 10**3.5)
+    turned = follow(iq, kind, [1] * 9)
+    when = hop_times(turned)
+    before, after = (when > 1.5) & (when < 2.4), (when > 3.6) & (when < 4.8)
+    assert np.all(turned.track.lock[:, before | after] == Lock.LOCKED)
+    assert np.abs(turned.track.offset_hz[:, before] - 240.0).max() < 1.0
+    assert np.abs(turned.track.offset_hz[:, after] + 35.0).max() < 1.0
+
+
+@pytest.mark.parametrize(("side", "tone_hz"), [(1, 420.0), (0, -320.0)])
+def test_a_tone_that_begins_late_does_not_take_over_from_a_pilot(side: int, tone_hz: float) -> None:
+    rng = np.random.default_rng(33)
+    tone, offset_hz = tones(rng, 9, 4.0)
+    t = np.arange(tone.shape[1]) / RATE_HZ
+    message = np.exp(2j * np.pi * tone_hz * t) * (t > 2.0)
+    iq = AMPLITUDE * tone * (0.05 + message) + white(rng, *tone.shape, 1e-9)
+    turned = follow(iq, Follow.PILOT, [side] * 9)
+    late = hop_times(turned) > 1.5
+    assert np.all(turned.track.lock[:, late][:, :-30] == Lock.LOCKED)
+    assert np.abs(turned.track.offset_hz[:, late] - offset_hz)[:, :-30].max() < 1.0
+
+
 # --- suppressed carriers --------------------------------------------------------------------------------------------
 
 
