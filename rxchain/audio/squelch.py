@@ -67,11 +67,13 @@ class Squelch:
         self._windows.reset()
         self._recent = np.zeros((_AVERAGED, n, self._frame), np.float32)
         self._frames = 0
+        self._received = 0
         self._shut_for = np.full(n, self._hang, np.int64)
 
     def process(self, iq: ComplexBlock) -> Bools:
         """The decisions that have become complete."""
         steps: list[Bools] = []
+        self._received += iq.shape[1]
         while iq.shape[1]:
             window, iq = self._windows.take(iq)
             if window is not None:
@@ -80,7 +82,8 @@ class Squelch:
 
     def flush(self) -> Bools:
         """One more decision where a step has begun."""
-        return self.process(np.zeros((len(self._inside), self.step_samples - 1), np.complex64))
+        missing = -self._received % self.step_samples
+        return self.process(np.zeros((len(self._inside), missing), np.complex64))
 
     def _decide(self, window: ComplexBlock) -> Bools:
         spectrum = scipy.fft.fft(window * self._window, axis=1)

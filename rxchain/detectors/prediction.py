@@ -132,12 +132,12 @@ class Predictor:
         coherent = self._residue(tracked_real, real, total)
         envelope_extra = self._residue(envelope_half, real, total)
         upper_noise, lower_noise = self._side_noise(low, high, floor)
-        sides_message = message  # one sideband of amplitude 1/2 doubled: the message as it was
+        # One sideband of amplitude 1/2, doubled, is the message as it was.
         by_name = {
             "coherent": message / (noise + coherent),
             "envelope": message / (noise + envelope_extra),
-            "upper": sides_message / (upper_noise + coherent),
-            "lower": sides_message / (lower_noise + coherent),
+            "upper": message / (upper_noise + coherent + _TINY),
+            "lower": message / (lower_noise + coherent + _TINY),
         }
         sinad_db = np.array(
             [[10.0 * np.log10(by_name[name][row]) for name in c.candidates] for row, c in enumerate(self._channels)]
