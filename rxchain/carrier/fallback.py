@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+from dataclasses import fields
+
 import numpy as np
 
 from rxchain.carrier.follower import CarrierFollower
+from rxchain.carrier.joining import beginning, join
 from rxchain.carrier.track import Lock, Track, Turned
 from rxchain.streams import ComplexBlock
 
@@ -39,35 +42,22 @@ class FallbackFollower:
         return turned
 
     def _chosen(self, new: list[Turned]) -> Turned:
-        both = [_joined([*waiting, piece]) for waiting, piece in zip(self._waiting, new, strict=True)]
-        hops = min(turned.track.lock.shape[1] for turned in both)
-        samples = min(min(turned.iq.shape[1] for turned in both), hops * self.hop_samples)
-        self._waiting = [[_cut(turned, hops, samples, rest=True)] for turned in both]
-        first, second = (_cut(turned, hops, samples, rest=False) for turned in both)
+        hop = self.hop_samples
+        both = [join([*waiting, piece], len(piece.iq), hop) for waiting, piece in zip(self._waiting, new, strict=True)]
+        samples = min(turned.iq.shape[1] for turned in both)
+        self._waiting = [[_after(turned, samples)] for turned in both]
+        first, second = (beginning(turned, samples) for turned in both)
         use_second = (first.track.lock == Lock.NONE) & (second.track.lock != Lock.NONE)
-        track = Track(
-            *(
-                np.where(use_second, getattr(second.track, name), getattr(first.track, name))
-                for name in ("offset_hz", "phase_cycles", "amplitude", "noise_density", "lock")
-            )
-        )
-        by_sample = np.repeat(use_second, self.hop_samples, axis=1)[:, :samples]
-        return Turned(np.where(by_sample, second.iq, first.iq), track, self.hop_samples)
+        readings = {
+            field.name: np.where(use_second, getattr(second.track, field.name), getattr(first.track, field.name))
+            for field in fields(Track)
+        }
+        by_sample = np.repeat(use_second, hop, axis=1)[:, :samples]
+        return Turned(np.where(by_sample, second.iq, first.iq), Track(**readings), hop)
 
 
-def _joined(pieces: list[Turned]) -> Turned:
-    tracks = [piece.track for piece in pieces]
-    joined = Track(
-        *(
-            np.concatenate([getattr(track, name) for track in tracks], axis=1)
-            for name in ("offset_hz", "phase_cycles", "amplitude", "noise_density", "lock")
-        )
-    )
-    return Turned(np.concatenate([piece.iq for piece in pieces], axis=1), joined, pieces[0].hop_samples)
-
-
-def _cut(turned: Turned, hops: int, samples: int, *, rest: bool) -> Turned:
-    h, s = (slice(hops, None), slice(samples, None)) if rest else (slice(hops), slice(samples))
-    t = turned.track
-    track = Track(t.offset_hz[:, h], t.phase_cycles[:, h], t.amplitude[:, h], t.noise_density[:, h], t.lock[:, h])
-    return Turned(turned.iq[:, s], track, turned.hop_samples)
+def _after(turned: Turned, samples: int) -> Turned:
+    """What follows the first samples, whole hops of them."""
+    hops = -(-samples // turned.hop_samples)
+    track = Track(**{field.name: getattr(turned.track, field.name)[:, hops:] for field in fields(Track)})
+    return Turned(turned.iq[:, samples:], track, turned.hop_samples)
