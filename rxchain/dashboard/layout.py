@@ -11,10 +11,10 @@ from rich.text import Text
 
 from rxchain.chain.status import ChannelStatus, ReceiverStatus
 from rxchain.dashboard.bars import Glyphs, depth_bar, snr_bar, trend
-from rxchain.dashboard.wording import LOCK_WORDS, clean, duration, frequency, short, with_uncertainty
+from rxchain.dashboard.wording import LOCK_WORDS, SHORT_LOCK_WORDS, clean, duration, frequency, short, with_uncertainty
 from rxchain.streams import Reading
 
-WIDE, MEDIUM = 112, 72
+WIDEST, WIDE, MEDIUM = 140, 112, 72
 _DETAIL_LINES = 6
 _STYLES = {"locked": "green", "held": "yellow", "none": "red", "nominal": "cyan"}
 
@@ -78,16 +78,23 @@ def channel_table(channels: tuple[ChannelStatus, ...], selected: int, width: int
     """A row a channel; what does not fit a narrow screen is left to the strip below."""
     table = Table(box=None, pad_edge=False, padding=(0, 1, 0, 0), width=width, header_style="dim", show_edge=False)
     wide, medium = width >= WIDE, width >= MEDIUM
-    columns: list[tuple[str, int | None, Literal["left", "right"]]] = [("channel", 10 if not wide else 13, "left")]
+    widest = width >= WIDEST
+    columns: list[tuple[str, int | None, Literal["left", "right"]]] = [("channel", 11 if wide else 10, "left")]
     if medium:
         columns.append(("frequency", 11, "right"))
-    columns += [("emission", 10, "left"), ("detector", 8 if wide else 4, "left"), ("lock", 7 if wide else 4, "left")]
-    columns += [("SNR", 13 if wide else 8, "left"), ("dB", 3, "right")]
+    columns += [
+        ("emission", 10, "left"),
+        ("detector" if wide else "det", 9 if wide else 3, "left"),
+        ("lock", 7 if wide else 4, "left"),
+    ]
+    columns += [("SNR", 10 if wide else 8, "left"), ("dB", 3, "right")]
     if medium:
-        columns += [("−depth+", 13 if wide else 7, "left"), ("%", 3, "right")]
+        columns += [("−depth+", 9 if wide else 7, "left"), ("%", 4, "right")]
     columns.append(("offset", 7 if wide else 6, "right"))
+    if widest:
+        columns.append(("dBFS", 5, "right"))
     if wide:
-        columns += [("dBFS", 5, "right"), ("audio", 6, "left"), ("why", None, "left")]
+        columns += [("audio", 5, "left"), ("why", None, "left")]
     for name, column_width, justify in columns:
         table.add_column(
             name,
@@ -98,14 +105,14 @@ def channel_table(channels: tuple[ChannelStatus, ...], selected: int, width: int
             ratio=None if column_width else 1,
         )
     for place, channel in enumerate(channels):
-        cells = _row(channel, wide, medium, glyphs)
+        cells = _row(channel, width, glyphs)
         table.add_row(*cells, style="reverse" if place == selected else None)
     return table
 
 
 def detail_strip(channel: ChannelStatus, width: int, glyphs: Glyphs) -> Group:
-    """All there is to say of one channel, six lines."""
-    best = channel.overall
+    """All there is to say of one channel over the last seconds, six lines."""
+    best = channel.recent
     confidence = "as given" if channel.emission_given else f"identified, {100 * channel.emission_confidence:.0f} % sure"
     low_hz, high_hz = channel.audio_hz
     gain = "gain fixed" if channel.gain_db is None else f"gain {channel.gain_db:+.0f} dB"
@@ -131,27 +138,29 @@ def detail_strip(channel: ChannelStatus, width: int, glyphs: Glyphs) -> Group:
     return Group(rule, *(Text(line, no_wrap=True, overflow="ellipsis") for line in lines))
 
 
-def _row(channel: ChannelStatus, wide: bool, medium: bool, glyphs: Glyphs) -> list[Text]:
+def _row(channel: ChannelStatus, width: int, glyphs: Glyphs) -> list[Text]:
+    wide, medium = width >= WIDE, width >= MEDIUM
     figures = channel.recent
     snr, rise, fall = figures.snr_db, figures.depth_positive_percent, figures.depth_negative_percent
     over = (fall is not None and fall.value > 100.0) or (rise is not None and rise.value > 125.0)
-    lock = LOCK_WORDS.get(channel.lock, channel.lock)
+    lock = (LOCK_WORDS if wide else SHORT_LOCK_WORDS).get(channel.lock, channel.lock)
     cells = [Text(clean(channel.name))]
     if medium:
         cells.append(Text(frequency(channel.frequency_hz)))
     cells.append(Text(channel.emission))
-    cells.append(Text(channel.detector if wide else channel.detector[:4]))
-    cells.append(Text(lock if wide else lock[:4], style=_STYLES.get(channel.lock, "")))
-    cells.append(Text(snr_bar(_value(snr), 13 if wide else 8, glyphs), style="" if channel.open else "dim"))
+    cells.append(Text(channel.detector if wide else channel.detector[:3]))
+    cells.append(Text(lock, style=_STYLES.get(channel.lock, "")))
+    cells.append(Text(snr_bar(_value(snr), 10 if wide else 8, glyphs), style="" if channel.open else "dim"))
     cells.append(Text(short(snr)))
     if medium:
-        bar = depth_bar(_value(fall), _value(rise), 6 if wide else 3, glyphs)
+        bar = depth_bar(_value(fall), _value(rise), 4 if wide else 3, glyphs)
         cells.append(Text(bar, style="bold red" if over else ""))
         depth = short(figures.depth_percent)
-        cells.append(Text(depth + "!" if over and len(depth) < 3 else depth, style="bold red" if over else ""))
+        cells.append(Text(depth + "!" * over, style="bold red" if over else ""))
     cells.append(Text(short(figures.carrier_offset_hz, 1, sign=True)))
-    if wide:
+    if width >= WIDEST:
         cells.append(Text(short(figures.level_dbfs)))
+    if wide:
         loudest = max(channel.audio_dbfs, default=-200.0)
         cells.append(
             Text(f"{loudest:.0f}" if channel.open and loudest > -150 else "shut" if not channel.open else "quiet")

@@ -20,6 +20,8 @@ from rxchain.dashboard.bars import ASCII, BLOCKS, Glyphs
 from rxchain.dashboard.layout import picture
 
 _REFRESH_S = 0.2
+# Arrow and page keys as terminals send them (ECMA-48), and the channels they move by.
+_MOVES = {"\x1b[A": -1, "\x1b[B": 1, "\x1b[5~": -10, "\x1b[6~": 10}
 
 
 class Dashboard:
@@ -64,26 +66,22 @@ class Dashboard:
             if status is not None:
                 width, height = self._console.size
                 live.update(picture(status, self._selected, width, height, self._glyphs), refresh=True)
-            key = self._key()
-            count = len(status.channels) if status else 1
-            if key in ("q", "Q"):
-                stop()
-            elif key in ("\x1b[A", "k"):
-                self._selected = max(0, self._selected - 1)
-            elif key in ("\x1b[B", "j"):
-                self._selected = min(count - 1, self._selected + 1)
-            elif key == "\x1b[5~":
-                self._selected = max(0, self._selected - 10)
-            elif key == "\x1b[6~":
-                self._selected = min(count - 1, self._selected + 10)
+            self._obey(self._keys(), stop, len(status.channels) if status else 1)
 
-    def _key(self) -> str:
-        """The key pressed within one refresh, empty if none."""
+    def _obey(self, keys: str, stop: Callable[[], None], n_channels: int) -> None:
+        """Carries out the keys pressed; several may have come at once."""
+        if "q" in keys or "Q" in keys:
+            stop()
+        moves = sum(step * keys.count(key) for key, step in _MOVES.items())
+        self._selected = min(max(self._selected + moves, 0), n_channels - 1)
+
+    def _keys(self) -> str:
+        """What was typed within one refresh."""
         if not sys.stdin.isatty():
             self._ended.wait(_REFRESH_S)
             return ""
         ready, _, _ = select.select([sys.stdin], [], [], _REFRESH_S)
-        return os.read(sys.stdin.fileno(), 16).decode(errors="ignore") if ready else ""
+        return os.read(sys.stdin.fileno(), 64).decode(errors="ignore") if ready else ""
 
 
 @contextmanager

@@ -9,6 +9,7 @@ from rxchain.units import format_frequency
 
 NOTHING = "–"
 LOCK_WORDS = {"locked": "locked", "held": "held", "none": "no lock", "nominal": "by dial"}
+SHORT_LOCK_WORDS = {"locked": "lock", "held": "held", "none": "none", "nominal": "dial"}
 
 
 def with_uncertainty(reading: Reading | None, unit: str) -> str:
