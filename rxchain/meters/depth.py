@@ -18,6 +18,9 @@ from rxchain.streams import Bools, ComplexBlock, FloatBlock, Floats
 
 _OVERSAMPLING = 4
 _DRAWS = 6
+_MOST_LINES, _LINE_BINS = 6, 3  # tones that make a message, bins on either side of each
+_CLEAR_LINE = 20.0  # power of a line's strongest bin over the mean noise in one
+_LEFT_BY_LINES = 0.04  # share of the message's power that they may leave
 RECENT_CHUNKS = 12  # about 3 s
 _LATTICE = 32  # fine samples whose highest stands for them when noise is added back
 
@@ -31,7 +34,9 @@ class DepthMeter:
     """
 
     def __init__(self, n_channels: int, frame: int, rate_hz: float, bands_hz: list[tuple[float, float]]) -> None:
-        self._frame = frame
+        self._frame, self._rate_hz, self._bands_hz = frame, rate_hz, bands_hz
+        self._chunk_window: Floats = np.zeros(0)
+        self._chunk_band: Bools = np.zeros((n_channels, 0), bool)
         n = frame // 2 + 1
         frequency_hz = np.arange(n) * rate_hz / frame
         self._band = np.array([(frequency_hz >= low) & (frequency_hz <= high) for low, high in bands_hz], np.float32)
@@ -51,8 +56,11 @@ class DepthMeter:
         self._any = np.zeros(n, bool)
         self._latest: deque[Floats] = deque(maxlen=RECENT_CHUNKS)
 
-    def process(self, frames: ComplexBlock, carrier: Floats, valid: Bools) -> None:
-        """A chunk as half-overlapping frames, (channels, frames, samples); channels not ``valid`` are left out."""
+    def process(self, frames: ComplexBlock, upright: ComplexBlock, carrier: Floats, valid: Bools) -> None:
+        """A chunk as half-overlapping frames, (channels, frames, samples), and as it is, (channels, samples).
+
+        Channels that are not ``valid`` are left out.
+        """
         safe = np.where(valid, carrier, 1.0)
         scaled = frames * (1.0 / safe)[:, None, None].astype(np.float32)
         in_phase: ComplexBlock = scipy.fft.rfft((scaled.real - np.float32(1.0)) * self._root, axis=2)
@@ -68,7 +76,7 @@ class DepthMeter:
         quadrature *= np.sqrt(gain)
         message, shaped = self._joined(0, in_phase), self._joined(1, quadrature)
         self._noise_rms = np.where(valid, np.std(shaped, axis=1), self._noise_rms)
-        self._keep_extremes(message, shaped, valid)
+        self._keep_extremes(message, shaped, valid, self._steady_lines(upright, safe))
         self._any |= valid
 
     def peaks(self) -> tuple[Floats, Floats, Floats, Floats, Bools]:
@@ -119,14 +127,55 @@ class DepthMeter:
         self._overlap[which] = output[:, n_frames * half :]
         return output[:, : n_frames * half]
 
-    def _keep_extremes(self, message: FloatBlock, noise: FloatBlock, valid: Bools) -> None:
+    def _steady_lines(self, upright: ComplexBlock, carrier: Floats) -> tuple[Bools, Floats, Floats, Floats]:
+        """Where a few steady tones are all there is to the message: their peaks, and how much noise is left in them.
+
+        (channels,) each: whether it is so, rise, fall, noise over the carrier. The chunk's own transform is far
+        sharper than a frame's, so that hardly any noise stays with the lines.
+        """
+        n = upright.shape[1]
+        if self._chunk_window.shape != (n,):
+            self._chunk_window = np.hanning(n + 1)[:-1]
+            frequency_hz = np.fft.rfftfreq(n, 1.0 / self._rate_hz)
+            self._chunk_band = np.array(
+                [(frequency_hz >= low) & (frequency_hz <= high) for low, high in self._bands_hz]
+            )
+        scaled = upright / carrier[:, None]
+        spectrum = scipy.fft.rfft((scaled.real - 1.0) * self._chunk_window, axis=1) * self._chunk_band
+        noise = scipy.fft.rfft(scaled.imag * self._chunk_window, axis=1) * self._chunk_band
+        power = np.abs(spectrum) ** 2
+        noise_power = (np.abs(noise) ** 2).sum(axis=1)
+        kept = np.zeros(power.shape, bool)
+        rows = np.arange(len(power))[:, None]
+        left = power.copy()
+        clear = _CLEAR_LINE * noise_power / np.maximum(self._chunk_band.sum(axis=1), 1)
+        for _ in range(_MOST_LINES):
+            line = left.argmax(axis=1)
+            is_clear = left[rows[:, 0], line] > clear
+            around = np.clip(line[:, None] + np.arange(-_LINE_BINS, _LINE_BINS + 1), 0, power.shape[1] - 1)
+            kept[rows, around] |= is_clear[:, None]
+            left[rows, around] = np.where(is_clear[:, None], 0.0, left[rows, around])
+        message = np.maximum(power.sum(axis=1) - noise_power, 1e-30)
+        is_steady = left.sum(axis=1) - noise_power < _LEFT_BY_LINES * message
+        is_steady &= message > noise_power
+        middle = slice(n // 4 * _OVERSAMPLING, n * 3 // 4 * _OVERSAMPLING)
+        fine = scipy.fft.irfft(spectrum * kept, n * _OVERSAMPLING, axis=1)[:, middle] * _OVERSAMPLING
+        fine /= np.repeat(self._chunk_window, _OVERSAMPLING)[middle]
+        share = kept.sum(axis=1) / np.maximum(self._chunk_band.sum(axis=1), 1)
+        rms = np.sqrt(noise_power * 2.0 / (n * np.sum(self._chunk_window**2)) * share)
+        return is_steady, fine.max(axis=1), -fine.min(axis=1), rms
+
+    def _keep_extremes(
+        self, message: FloatBlock, noise: FloatBlock, valid: Bools, lines: tuple[Bools, Floats, Floats, Floats]
+    ) -> None:
+        is_steady, *line_peaks, line_noise = lines
         n_channels = len(message)
         n = message.shape[1] // _LATTICE * _LATTICE
         cells = message[:, :n].reshape(n_channels, -1, _LATTICE)
         latest = np.zeros((2, n_channels))
         for side, sign in enumerate((1.0, -1.0)):
             highest = cells.max(axis=2) if sign > 0 else -cells.min(axis=2)
-            smooth = highest.max(axis=1)
+            smooth = np.where(is_steady, line_peaks[side], highest.max(axis=1))
             latest[side] = np.where(valid, smooth, 0.0)
             higher = valid & (smooth > self._best[side, 0])
             if not higher.any():
@@ -138,8 +187,11 @@ class DepthMeter:
                 draws.append((highest + (1 if k % 2 else -1) * noise[:, at]).max(axis=1))
             drawn = np.array(draws)
             self._best[side, 0] = np.where(higher, smooth, self._best[side, 0])
-            self._best[side, 1] = np.where(higher, drawn.mean(axis=0), self._best[side, 1])
-            self._best[side, 2] = np.where(higher, drawn.std(axis=0), self._best[side, 2])
+            mean = np.where(is_steady, smooth, drawn.mean(axis=0))
+            scatter = np.where(is_steady, line_noise, drawn.std(axis=0))
+            self._best[side, 1] = np.where(higher, mean, self._best[side, 1])
+            self._best[side, 2] = np.where(higher, scatter, self._best[side, 2])
+        self._noise_rms = np.where(valid & is_steady, line_noise, self._noise_rms)
         self._latest.append(latest)
 
 

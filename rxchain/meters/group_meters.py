@@ -137,7 +137,7 @@ class GroupMeters:
         chunk = Tally(n, self._spectra.n_messages)
         self._fill(chunk, valid, upright, density, messages, power.mean(axis=1), is_locked)
         if self._has_depth.any():
-            self._depth.process(frames, amplitude.mean(axis=1), is_locked & self._has_depth & valid)
+            self._depth.process(frames, upright, amplitude.mean(axis=1), is_locked & self._has_depth & valid)
         self._recent.append(chunk)
         self._settle(chunk)
 

@@ -12,6 +12,7 @@ from rxchain.streams import FloatBlock
 
 # A RIFF file counts its bytes in 32 bits; above this length the 64-bit form is written.
 _LARGEST_RIFF_BYTES = 4_000_000_000
+_ADD_PEAK_CHUNK = 0x1050  # libsndfile's command of this name
 
 
 class AudioFile:
@@ -32,6 +33,9 @@ class AudioFile:
             self._file = soundfile.SoundFile(
                 path, "w", int(rate_hz), n_messages, subtype="FLOAT", format="RF64" if large else "WAV"
             )
+            # The library would note the time of writing beside the peak; the same audio is to give the same file. Its
+            # public interface has no switch for it.
+            soundfile._snd.sf_command(self._file._file, _ADD_PEAK_CHUNK, soundfile._ffi.NULL, 0)
         except self._failures as error:
             raise SinkError(f"{path}: cannot be written: {error}") from error
 
