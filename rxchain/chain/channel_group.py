@@ -22,6 +22,8 @@ from rxchain.meters.group_meters import GroupMeters, MeteredChannel
 from rxchain.streams import Bools, ComplexBlock, FloatBlock, Floats
 from rxchain.tuning.plan import BankPlan
 
+_PILOT_SHARE, _LEAST_SEARCH_HZ = 0.8, 60.0
+
 
 class ChannelGroup:
     """A group of channels of one kind, from their I/Q to their audio.
@@ -126,7 +128,12 @@ class ChannelGroup:
     def detector(self, row: int) -> tuple[str, str]:
         """The detector that serves a channel, and why."""
         locked = self.locked_fraction(row)
-        return self._detectors.in_words(row, was_locked=locked is not None and locked > 0.0)
+        was_locked = locked is not None and locked > 0.0
+        if was_locked and isinstance(self._follower, FallbackFollower):
+            by_messages = self._follower.uses_second
+            if by_messages is not None and by_messages[row]:
+                return "coherent", "no pilot: followed by the messages; which is which, and their signs, are not known"
+        return self._detectors.in_words(row, was_locked)
 
     def _detected(self, turned: Turned) -> FloatBlock:
         lock = turned.track.lock
@@ -152,7 +159,9 @@ class ChannelGroup:
 
 def _follower(kind: GroupKind, channels: Sequence[ChannelSettings], rate_hz: float) -> Follower:
     n, sides = len(channels), [channel.emission.side or 0 for channel in channels]
-    settings = FollowerSettings(kind.follow, live=kind.live, message_hz=kind.message_hz)
+    # Where a pilot may be missing, it is not looked for among the messages.
+    search_hz = _PILOT_SHARE * kind.message_hz[0] if kind.pilot_is_optional else FollowerSettings(kind.follow).search_hz
+    settings = FollowerSettings(kind.follow, max(search_hz, _LEAST_SEARCH_HZ), kind.live, kind.message_hz)
     if kind.follow is Follow.NOMINAL:
         return make_follower(settings, n, rate_hz, sides, np.array([_shift_hz(channel) for channel in channels]))
     if kind.fourth_power:

@@ -33,6 +33,7 @@ class GroupKind:
 
     bins: int
     follow: Follow
+    pilot_is_optional: bool
     fourth_power: bool
     live: bool
     message_hz: tuple[float, float]
@@ -48,6 +49,7 @@ def kind_of(channel: ChannelSettings, plan: BankPlan) -> GroupKind:
     return GroupKind(
         bins=_bins(channel, plan),
         follow=follow,
+        pilot_is_optional=emission.reference in (Reference.PILOT_OR_NOMINAL, Reference.PILOT_OR_FOURTH_POWER),
         fourth_power=emission.reference is Reference.PILOT_OR_FOURTH_POWER,
         live=channel.delay == "live",
         message_hz=_ANY_MESSAGE_HZ if follow in (Follow.NOMINAL, Follow.CARRIER) else _followed_band(channel),
