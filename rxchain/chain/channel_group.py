@@ -36,7 +36,8 @@ class ChannelGroup:
         self.kind = kind
         self.channels = tuple(channels)
         self.rate_hz = plan.rate_hz(kind.bins)
-        usable_hz = plan.usable_hz(kind.bins)
+        # A channel turned away from its middle takes the bank's slopes with it.
+        usable_hz = plan.usable_hz(kind.bins) - max(abs(_shift_hz(channel)) for channel in channels)
         self._follower = _follower(kind, channels, self.rate_hz)
         self._meters = GroupMeters([_metered(channel) for channel in channels], self.rate_hz, usable_hz)
         thresholds_db = [channel.squelch_db for channel in channels]

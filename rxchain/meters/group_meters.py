@@ -27,7 +27,7 @@ Peaks: TypeAlias = tuple[Floats, Floats, Floats, Floats, Bools]
 __all__ = ["GroupMeters", "MeteredChannel"]
 
 _CHUNK_HOPS = 48  # 0.26 s
-_BESIDE_HZ = 1_000.0
+_BESIDE_HZ = 2_500.0
 _PRESENT_RATIO = 0.2  # message power over noise power, in a chunk, that counts as something being sent
 _HANG_CHUNKS = 6  # a pause of about a second and a half still belongs to the message
 
@@ -47,8 +47,8 @@ class GroupMeters:
         self._frame = 2 * self._chunk // FRAMES
         self._spectra = MessageSpectra(channels, rate_hz, self._frame)
         # The floor is looked for near the emission: a recording may have been filtered narrower than its rate.
-        highest_hz = max(channel.audio_hz[1] for channel in channels)
-        self._usable_hz = min(usable_hz, highest_hz + _BESIDE_HZ)
+        reaches_hz = [_reach_hz(channel) for channel in channels]
+        self._usable_hz = min(usable_hz, max(reaches_hz))
         self._has_depth: Bools = np.array([channel.emission.has_depth for channel in channels])
         self._has_carrier: Bools = np.array(
             [channel.emission.reference is not Reference.NOMINAL for channel in channels]
@@ -224,6 +224,12 @@ class GroupMeters:
                 )
             )
         return figures
+
+
+def _reach_hz(channel: MeteredChannel) -> float:
+    """How far from the carrier to look for noise alone; quadrature stereo fills several times its message's band."""
+    high_hz = channel.audio_hz[1]
+    return 4.0 * high_hz if channel.emission.family == "AM-STEREO" else high_hz + _BESIDE_HZ
 
 
 _TRACK_FIELDS = ("offset_hz", "phase_cycles", "amplitude", "noise_density", "lock")

@@ -25,7 +25,7 @@ _AVERAGES = (
 )
 _MEAN_BELOW = float(gammainc(_AVERAGES + 1, _AVERAGES) / gammainc(_AVERAGES, _AVERAGES))
 _SHARE_BELOW = float(gammainc(_AVERAGES, _AVERAGES))
-LEAST_NOISE_SHARE = 0.15  # with fewer cells of noise than this the estimate is no measurement
+LEAST_NOISE_SHARE = 0.04  # with fewer cells of noise than this the estimate is no measurement
 
 
 class NoiseFloor:
