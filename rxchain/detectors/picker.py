@@ -7,7 +7,6 @@ carrier to follow there is nothing to choose: the envelope needs none. In a fade
 
 from __future__ import annotations
 
-from collections import deque
 from collections.abc import Sequence
 from dataclasses import dataclass
 
@@ -16,17 +15,18 @@ from numpy.typing import NDArray
 
 from rxchain.carrier.hops import hop_samples
 from rxchain.carrier.track import Lock, Turned
-from rxchain.detectors.prediction import PickedChannel, Prediction, Predictor
+from rxchain.detectors.prediction import PickedChannel, Prediction, Predictor, Rows
 from rxchain.kernels.overlap_save import Windows
 from rxchain.streams import Bools, Floats
 
 __all__ = ["Choices", "DetectorPicker", "PickedChannel"]
 
 _STEP_HOPS = 48  # 0.26 s
-_MEMORY = 0.2  # weight of the latest step: about 1.2 s
+_TURNS = 4  # a channel is looked at every fourth step: once a second
+_MEMORY = 0.6  # weight of the latest look: about 1.2 s
 _LEAD_DB, _ONE_SIDE_LEAD_DB, _AT_ONCE_DB = 0.5, 1.5, 3.0
-_PATIENCE_STEPS = 4
-_DISTORTION_STEPS = 40  # envelope distortion comes in bursts: the largest of the last 10 s counts
+_PATIENCE = 2  # looks
+_DISTORTION_LOOKS = 10  # envelope distortion comes in bursts: the largest of the last 10 s counts
 _NOTHING_TO_HEAR_DB = 0.0
 _UNKNOWN_DB = -200.0
 
@@ -68,9 +68,10 @@ class DetectorPicker:
         self._smoothed: Floats = np.full((n, most), np.nan)
         self._leading = np.zeros(n, np.int64)
         self._leader = np.zeros(n, np.int8)
-        self._worst: deque[Floats] = deque(maxlen=_DISTORTION_STEPS)
+        self._shares = np.zeros((n, _DISTORTION_LOOKS))
+        self._deepest = np.ones(n)
+        self._steps = 0
         self._now = np.where(self._envelope >= 0, self._envelope, self._coherent).astype(np.int8)
-        self._prediction: Prediction | None = None
         self._is_locked: Bools = np.zeros(n, bool)
         self._started = False
 
@@ -100,48 +101,59 @@ class DetectorPicker:
         step, self._locks = locks[:, :_STEP_HOPS], [locks[:, _STEP_HOPS:]]
         locked = (step == Lock.LOCKED).mean(axis=1) > 0.5
         none = (step == Lock.NONE).mean(axis=1) > 0.5
-        prediction = self._predictor.predict(window)
-        self._prediction = prediction
-        present_db = self._with_worst_distortion(prediction)
-        newly = locked & ~self._is_locked & np.isnan(self._smoothed).all(axis=1)
-        fresh = np.isnan(self._smoothed)
-        smoothed = np.where(fresh, present_db, self._smoothed + _MEMORY * (present_db - self._smoothed))
-        self._smoothed = np.where(locked[:, None], smoothed, self._smoothed)
-        self._is_locked = locked
-        rows = np.arange(len(self._channels))
-        filled = np.where(np.isnan(self._smoothed), _UNKNOWN_DB, self._smoothed)
-        best = filled.argmax(axis=1).astype(np.int8)
-        lead_db = filled[rows, best] - filled[rows, self._now]
-        lead_now_db = np.nan_to_num(present_db[rows, best] - present_db[rows, self._now])
-        wanted_db = np.where(self._is_one_side[rows, best], _ONE_SIDE_LEAD_DB, _LEAD_DB)
-        ahead = locked & (lead_db > wanted_db)
-        self._leading = np.where(ahead & ((best == self._leader) | (self._leading == 0)), self._leading + 1, 0)
-        self._leader = best
-        change = (self._leading >= _PATIENCE_STEPS) | (ahead & (lead_db > _AT_ONCE_DB) & (lead_now_db > _AT_ONCE_DB))
-        quiet = filled.max(axis=1) < _NOTHING_TO_HEAR_DB
-        now = np.where(change & ~quiet, best, self._now)
-        # At first lock the coherent detector is taken up: the envelope's bursts of distortion have yet to show.
-        now = np.where(newly | (locked & quiet), self._coherent, now)
+        unknown = np.isnan(self._smoothed).all(axis=1)
+        # Channels take turns, so that the work is spread; one that has just been locked is looked at at once.
+        turn = np.arange(len(locked)) % _TURNS == self._steps % _TURNS
+        self._steps += 1
+        rows = np.flatnonzero(locked & (turn | unknown))
+        if len(rows):
+            self._compare(rows, self._predictor.predict(window[rows], rows))
+        now = np.where(locked & unknown, self._coherent, self._now)
         now = np.where(none & (self._envelope >= 0), self._envelope, now)
-        self._leading[now != self._now] = 0
         self._smoothed[none] = np.nan
+        self._is_locked = locked
         self._now = now.astype(np.int8)
 
-    def _with_worst_distortion(self, prediction: Prediction) -> Floats:
+    def _compare(self, rows: Rows, prediction: Prediction) -> None:
+        """Weighs a new prediction of some channels, and changes their detectors where it is time."""
+        present_db = self._with_worst_distortion(rows, prediction)
+        before = self._smoothed[rows]
+        first = np.isnan(before).all(axis=1)
+        smoothed = np.where(np.isnan(before), present_db, before + _MEMORY * (present_db - before))
+        self._smoothed[rows] = smoothed
+        self._deepest[rows] = prediction.deepest
+        each = np.arange(len(rows))
+        filled = np.where(np.isnan(smoothed), _UNKNOWN_DB, smoothed)
+        best = filled.argmax(axis=1).astype(np.int8)
+        now = self._now[rows]
+        lead_db = filled[each, best] - filled[each, now]
+        lead_now_db = np.nan_to_num(present_db[each, best] - present_db[each, now])
+        ahead = lead_db > np.where(self._is_one_side[rows, best], _ONE_SIDE_LEAD_DB, _LEAD_DB)
+        going_on = ahead & ((best == self._leader[rows]) | (self._leading[rows] == 0))
+        leading = np.where(going_on, self._leading[rows] + 1, 0)
+        self._leader[rows] = best
+        change = (leading >= _PATIENCE) | (ahead & (lead_db > _AT_ONCE_DB) & (lead_now_db > _AT_ONCE_DB))
+        quiet = filled.max(axis=1) < _NOTHING_TO_HEAR_DB
+        chosen = np.where(change & ~quiet & ~first, best, now)
+        # With nothing to hear the coherent detector waits: the envelope's bursts of distortion have yet to show.
+        chosen = np.where(quiet, self._coherent[rows], chosen)
+        self._leading[rows] = np.where(chosen != now, 0, leading)
+        self._now[rows] = chosen
+
+    def _with_worst_distortion(self, rows: Rows, prediction: Prediction) -> Floats:
         """Predicted SINAD, the envelope's with the largest share of distortion in the last ten seconds."""
-        share = prediction.envelope_distortion / prediction.message
-        self._worst.append(np.where(np.isfinite(share), share, 0.0))
-        worst = np.max(self._worst, axis=0)
+        share = np.nan_to_num(prediction.envelope_distortion / prediction.message, posinf=0.0)
+        self._shares[rows] = np.concatenate([self._shares[rows, 1:], share[:, None]], axis=1)
         sinad_db = prediction.sinad_db.copy()
-        rows = np.flatnonzero(self._envelope >= 0)
-        with_worst = 1.0 / (prediction.noise[rows] / prediction.message[rows] + worst[rows])
-        sinad_db[rows, self._envelope[rows]] = 10.0 * np.log10(np.maximum(with_worst, 1e-12))
+        has = self._envelope[rows] >= 0
+        with_worst = 1.0 / (prediction.noise / prediction.message + self._shares[rows].max(axis=1))
+        sinad_db[has, self._envelope[rows][has]] = 10.0 * np.log10(np.maximum(with_worst[has], 1e-12))
         return sinad_db
 
     def _reason(self, row: int) -> str:
-        channel, prediction = self._channels[row], self._prediction
+        channel = self._channels[row]
         chosen = channel.candidates[self._now[row]]
-        if prediction is None or not self._is_locked[row]:
+        if not self._is_locked[row] or np.isnan(self._smoothed[row]).all():
             if chosen == "envelope":
                 return "no carrier followed: the envelope needs none"
             return "the carrier is in a fade: carried on as before"
@@ -149,7 +161,7 @@ class DetectorPicker:
         lead_db = float(self._smoothed[row, self._now[row]] - np.nanmax(self._smoothed[row, others]))
         if chosen in ("upper", "lower"):
             return f"the {chosen} sideband alone is {lead_db:.1f} dB cleaner: the other one is disturbed or faded"
-        deepest = float(prediction.deepest[row])
+        deepest = float(self._deepest[row])
         if chosen == "envelope":
             return f"the carrier's phase is unsteady: the envelope is {lead_db:.1f} dB ahead"
         if lead_db < _LEAD_DB:

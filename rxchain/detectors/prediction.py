@@ -10,6 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import TypeAlias
 
 import numpy as np
 import scipy.fft
@@ -17,12 +18,15 @@ from numpy.lib.stride_tricks import sliding_window_view
 from numpy.typing import NDArray
 
 from rxchain.emissions import Emission
-from rxchain.streams import Bools, ComplexBlock, Floats
+from rxchain.streams import Bools, ComplexBlock, FloatBlock, Floats
 
 _TINY = 1e-30
 _SLOPE_HZ = 300.0
 # Carrier over noise in the short window, below which turning by it would do harm.
 _TRUST_CARRIER = 10.0**2.5
+
+
+Rows: TypeAlias = NDArray[np.intp]
 
 
 @dataclass(frozen=True, slots=True)
@@ -91,17 +95,18 @@ class Predictor:
         self._bin_hz = rate_hz / frame
         self._quiet = [self._beside(channel, frequency_hz, usable_hz) for channel in channels]
 
-    def predict(self, window: ComplexBlock) -> Prediction:
-        """From a step of upright samples, (channels, overlap + step)."""
+    def predict(self, window: ComplexBlock, rows: Rows) -> Prediction:
+        """From a step of upright samples of some channels, (rows, overlap + step); the prediction is of those alone."""
+        bands = self._bands[rows]
         n_taps = self._kernels.shape[1]
         middle = window[:, n_taps // 2 : window.shape[1] - n_taps // 2]
         length = scipy.fft.next_fast_len(window.shape[1] + n_taps)
         spectrum = scipy.fft.fft(window, length, axis=1)
         if self._kernel_response.shape[1] != length:
             self._prepare(length)
-        carrier = scipy.fft.ifft(spectrum * self._kernel_response, axis=1)[:, n_taps - 1 : window.shape[1]]
+        carrier = scipy.fft.ifft(spectrum * self._kernel_response[rows], axis=1)[:, n_taps - 1 : window.shape[1]]
         # What the envelope detector sees: the emission's own band, and nothing of its neighbours.
-        own = scipy.fft.ifft(spectrum * self._own_band, axis=1)[:, n_taps // 2 : window.shape[1] - n_taps // 2]
+        own = scipy.fft.ifft(spectrum * self._own_band[rows], axis=1)[:, n_taps // 2 : window.shape[1] - n_taps // 2]
         strength = np.abs(carrier)
         mean_carrier = strength.mean(axis=1, dtype=np.float64)
         turn = np.conj(carrier) / np.maximum(strength, _TINY)
@@ -111,10 +116,10 @@ class Predictor:
         floor = np.array(
             [
                 np.median(row[quiet]) / np.log(2.0) if len(quiet) else 0.0
-                for row, quiet in zip(density, self._quiet, strict=True)
+                for row, quiet in zip(density, [self._quiet[row] for row in rows], strict=True)
             ]
         )
-        trusted: Bools = mean_carrier**2 > _TRUST_CARRIER * floor * self._kernel_noise
+        trusted: Bools = mean_carrier**2 > _TRUST_CARRIER * floor * self._kernel_noise[rows]
         ideal_iq = np.where(trusted[:, None], middle * turn, middle)
         ideal = frames_of(ideal_iq)
         magnitude = np.abs(own)
@@ -123,15 +128,15 @@ class Predictor:
         real, imaginary = (low + high) / 2.0, (low - high) / 2.0
         tracked_real = (tracked[:, :, : len(self._mirror)] + np.conj(tracked[:, :, self._mirror])) / 2.0
         envelope_half = envelope[:, :, : len(self._mirror)]
-        total, in_quadrature = self._power(real), self._power(imaginary)
-        width_hz = self._bands.sum(axis=1) * self._bin_hz
+        total, in_quadrature = self._power(real, bands), self._power(imaginary, bands)
+        width_hz = bands.sum(axis=1) * self._bin_hz
         one_sided_noise = floor * width_hz / 2.0
-        noise = np.where(self._sides == 0, in_quadrature, one_sided_noise)
+        noise = np.where(self._sides[rows] == 0, in_quadrature, one_sided_noise)
         noise = np.maximum(noise, 1e-9 * total + _TINY)
         message = np.maximum(total - noise, 1e-6 * total + _TINY)
-        coherent = self._residue(tracked_real, real, total)
-        envelope_extra = self._residue(envelope_half, real, total)
-        upper_noise, lower_noise = self._side_noise(low, high, floor)
+        coherent = self._residue(tracked_real, real, bands)
+        envelope_extra = self._residue(envelope_half, real, bands)
+        upper_noise, lower_noise = self._side_noise(low, high, floor, bands)
         # One sideband of amplitude 1/2, doubled, is the message as it was.
         by_name = {
             "coherent": message / (noise + coherent),
@@ -140,7 +145,10 @@ class Predictor:
             "lower": message / (lower_noise + coherent + _TINY),
         }
         sinad_db = np.array(
-            [[10.0 * np.log10(by_name[name][row]) for name in c.candidates] for row, c in enumerate(self._channels)]
+            [
+                [10.0 * np.log10(by_name[name][k]) for name in self._channels[row].candidates]
+                for k, row in enumerate(rows)
+            ]
         )
         in_phase = ideal_iq.real / np.maximum(mean_carrier, _TINY)[:, None]
         return Prediction(
@@ -167,25 +175,27 @@ class Predictor:
         spectra: ComplexBlock = scipy.fft.fft(cut * self._window, axis=2)
         return spectra
 
-    def _power(self, half: ComplexBlock) -> Floats:
+    def _power(self, half: ComplexBlock, bands: FloatBlock) -> Floats:
         """Power within each channel's message band of the real signal with these positive-frequency spectra."""
         power = (np.square(half.real) + np.square(half.imag)).mean(axis=1, dtype=np.float64)
-        return np.asarray((power * self._bands).sum(axis=1) * (2.0 * self._scale * self._bin_hz))
+        return np.asarray((power * bands).sum(axis=1) * (2.0 * self._scale * self._bin_hz))
 
-    def _residue(self, output: ComplexBlock, ideal: ComplexBlock, ideal_power: Floats) -> Floats:
+    def _residue(self, output: ComplexBlock, ideal: ComplexBlock, bands: FloatBlock) -> Floats:
         """Power of what a detector's output has and the ideal, scaled to it, has not; in the ideal's units."""
-        band = self._bands[:, None]
+        band = bands[:, None]
         product = np.einsum("cfk,cfk->c", np.real(output * np.conj(ideal)), np.broadcast_to(band, output.shape))
         share = np.einsum("cfk,cfk->c", np.square(np.abs(ideal)), np.broadcast_to(band, output.shape))
         gain = product / np.maximum(share, _TINY)
-        left = self._power(output - gain[:, None, None].astype(np.float32) * ideal)
+        left = self._power(output - gain[:, None, None].astype(np.float32) * ideal, bands)
         return np.asarray(left / np.maximum(gain, 0.1) ** 2)
 
-    def _side_noise(self, low: ComplexBlock, high: ComplexBlock, floor: Floats) -> tuple[Floats, Floats]:
+    def _side_noise(
+        self, low: ComplexBlock, high: ComplexBlock, floor: Floats, bands: FloatBlock
+    ) -> tuple[Floats, Floats]:
         """Noise in the message from each sideband alone: what the two sidebands do not share, at least the noise."""
-        width_hz = self._bands.sum(axis=1) * self._bin_hz
+        width_hz = bands.sum(axis=1) * self._bin_hz
         scale = self._scale * self._bin_hz
-        cells = self._bands / low.shape[1]
+        cells = bands / np.float32(low.shape[1])
         upper = np.einsum("cfk,ck->c", np.square(np.abs(low)), cells) * scale
         lower = np.einsum("cfk,ck->c", np.square(np.abs(high)), cells) * scale
         shared = np.abs(np.einsum("cfk,ck->ck", low * np.conj(high), cells)).sum(axis=1) * scale

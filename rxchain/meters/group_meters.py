@@ -55,7 +55,7 @@ class GroupMeters:
         )
         self._by_lock: Bools = np.array([channel.emission.reference is Reference.CARRIER for channel in channels])
         self._bands = [channel.audio_hz for channel in channels]
-        self._windows: Windows[np.complex64] = Windows((n,), self._frame // 2, self._chunk, np.complex64)
+        self._windows: Windows[np.complex64] = Windows((n,), self._frame, self._chunk, np.complex64)
         self.reset()
 
     def reset(self) -> None:
@@ -68,7 +68,7 @@ class GroupMeters:
         self._floor = NoiseFloor(n, self._frame, self._rate_hz, self._usable_hz)
         block_s = BLOCK_HOPS * self._hop / self._rate_hz
         self._carrier = CarrierSums(n, block_s)
-        self._depth = DepthMeter(n, self._frame, self._rate_hz, self._bands)
+        self._depth = DepthMeter(self._spectra.is_double, self._frame, self._rate_hz, self._bands)
         self._total = Tally(n, self._spectra.n_messages)
         self._recent: deque[Tally] = deque(maxlen=RECENT_CHUNKS)
         self._waiting: deque[Tally] = deque()
@@ -117,18 +117,18 @@ class GroupMeters:
 
     def _measure(self, window: NDArray[np.complex64], track: Track) -> None:
         half = self._frame // 2
-        first, last = self._chunks * self._chunk - half, (self._chunks + 1) * self._chunk
+        first, last = self._chunks * self._chunk - self._frame, (self._chunks + 1) * self._chunk
         self._chunks += 1
         self._lost = [stretch for stretch in self._lost if stretch[1] > first]
         n = len(self._channels)
         valid = np.full(n, not any(start < last and stop > first for start, stop in self._lost))
         frames = sliding_window_view(window, self._frame, axis=1)[:, ::half]
-        spectra = self._spectra.transform(frames)
+        spectra = self._spectra.transform(frames[:, 1:])
         density = self._spectra.density(spectra)
         self._floor.add(density, valid)
         if self._chunks % 2 == 0 or self._chunks < 4:
             self._floor.estimate()
-        upright = window[:, half:]
+        upright = window[:, self._frame :]
         phase, power, locked, amplitude = carrier_blocks(upright, track, self._hop, valid)
         self._carrier.add(phase, power, locked)
         self._recent_carriers.append((phase, power, locked))
@@ -137,7 +137,9 @@ class GroupMeters:
         chunk = Tally(n, self._spectra.n_messages)
         self._fill(chunk, valid, upright, density, messages, power.mean(axis=1), is_locked)
         if self._has_depth.any():
-            self._depth.process(frames, upright, amplitude.mean(axis=1), is_locked & self._has_depth & valid)
+            self._depth.process(
+                frames, upright, amplitude.mean(axis=1), chunk.floor, is_locked & self._has_depth & valid
+            )
         self._recent.append(chunk)
         self._settle(chunk)
 
