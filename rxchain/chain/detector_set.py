@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 
 import numpy as np
+from numpy.typing import NDArray
 
 from rxchain.carrier.track import Follow, Turned
 from rxchain.chain.channel_settings import AUTO, ChannelSettings
@@ -36,22 +37,34 @@ class DetectorSet:
         if len(self._names) > 1:
             picked = [PickedChannel(c.emission, c.audio_hz, c.vestige_hz, self._names) for c in channels]
             self._picker = DetectorPicker(picked, rate_hz, usable_hz)
+            # The choices for the step before the present one, for it, and for those after it that are known.
+            self._chosen = np.full((len(channels), 1), -1, np.int8)
+            self._in_step = 0
             self._switch = DetectorSwitch(
                 len(channels), kind.n_messages, len(self._names), self._picker.step_samples, rate_hz
             )
 
     def process(self, turned: Turned, upright: ComplexBlock) -> FloatBlock:
         """The chosen audio, (channels, messages, n), as far as it is complete."""
-        audio = [self._run(k, detector.process(upright)) for k, detector in enumerate(self._detectors)]
         if self._picker is None:
-            return audio[0]
+            return self._run(0, self._detectors[0].process(upright))
         choices = self._picker.process(turned).candidate
-        for step in choices.T:
-            self._served[np.arange(len(step)), step] += 1
-        if choices.shape[1]:
-            for row, (reason, chosen) in enumerate(zip(self._picker.reasons(), choices[:, -1], strict=True)):
-                self._reasons[row][chosen] = reason
-        return self._switch.process(audio, choices)
+        self._note(choices)
+        nothing = np.zeros((len(self._channels), self._kind.n_messages, 0), np.float32)
+        parts = [self._switch.process([nothing] * len(self._names), choices)]
+        self._chosen = np.concatenate([self._chosen, choices], axis=1)
+        step, done = self._picker.step_samples, 0
+        while done < upright.shape[1]:
+            n = min(upright.shape[1] - done, step - self._in_step)
+            self._activate()
+            piece = upright[:, done : done + n]
+            audio = [self._run(k, detector.process(piece)) for k, detector in enumerate(self._detectors)]
+            parts.append(self._switch.process(audio, choices[:, :0]))
+            done += n
+            self._in_step = (self._in_step + n) % step
+            if self._in_step == 0:
+                self._chosen = self._chosen[:, 1:]
+        return np.concatenate(parts, axis=2)
 
     def flush(self) -> FloatBlock:
         """The tail."""
@@ -59,6 +72,20 @@ class DetectorSet:
         if self._picker is None:
             return audio[0]
         return self._switch.process(audio, np.zeros((len(self._channels), 0), np.int8))
+
+    def _note(self, choices: NDArray[np.int8]) -> None:
+        """Keeps what served how long, and why."""
+        for step in choices.T:
+            self._served[np.arange(len(step)), step] += 1
+        if self._picker is not None and choices.shape[1]:
+            for row, (reason, chosen) in enumerate(zip(self._picker.reasons(), choices[:, -1], strict=True)):
+                self._reasons[row][chosen] = reason
+
+    def _activate(self) -> None:
+        """Detectors run where they are chosen for this step or were for the one before: a change is faded within it."""
+        before, now = self._chosen[:, 0], self._chosen[:, 1]
+        for k, detector in enumerate(self._detectors):
+            detector.active_rows = np.flatnonzero((before == k) | (now == k))
 
     def in_words(self, row: int, was_locked: bool) -> tuple[str, str]:
         """The detector that served a channel most, and the reason it last gave."""

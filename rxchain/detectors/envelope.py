@@ -42,7 +42,11 @@ class EnvelopeDetector(WindowedStage[np.complex64]):
     oversampling : multiple of the channel's rate at which magnitudes are taken.
     process(iq) : complex64, (channels, n). Returns float32, (channels, 1, m): in the channel's own units;
         an A3E carrier of amplitude C and depth mu gives the message at peak C * mu, as the coherent detector does.
+    active_rows : channels whose messages are wanted; None for all. The others' output is silence; one that joins is
+        right once ``delay_samples`` twice over have passed.
     """
+
+    active_rows: NDArray[np.intp] | None = None
 
     def __init__(
         self,
@@ -70,21 +74,30 @@ class EnvelopeDetector(WindowedStage[np.complex64]):
         self._magnitude.reset()
 
     def _advance(self, window: ComplexBlock) -> FloatBlock:
-        times, (n_channels, length), hop = self._oversampling, window.shape, self._windows.hop
+        hop = self._windows.hop
+        magnitude = np.zeros((len(window), hop * self._oversampling), np.float32)
+        rows = np.arange(len(window)) if self.active_rows is None else self.active_rows
+        if len(rows):
+            magnitude[rows] = self._fine_magnitude(window[rows], self._band[rows])
+        full, _ = self._magnitude.take(magnitude)
+        audio = np.zeros((len(window), 1, hop), np.float32)
+        if full is not None and len(rows):
+            spectrum = scipy.fft.rfft(full[rows], axis=1)[:, : self._audio.shape[1]] * self._audio[rows]
+            audio[rows, 0] = scipy.fft.irfft(spectrum, self._audio_length, axis=1)[:, -hop:]
+        return audio
+
+    def _fine_magnitude(self, window: ComplexBlock, band: NDArray[np.complex64]) -> FloatBlock:
+        """The new part of a window, limited to its band, as magnitudes at the higher rate."""
+        times, (n_channels, length) = self._oversampling, window.shape
         spectrum = scipy.fft.fft(window, axis=1)
-        spectrum *= self._band
+        spectrum *= band
         wide = np.zeros((n_channels, length * times), np.complex64)
         half = length // 2
         wide[:, :half], wide[:, -half:] = spectrum[:, :half], spectrum[:, half:]
         fine = scipy.fft.ifft(wide, axis=1, overwrite_x=True)[:, self._windows.overlap * times :]
         magnitude: FloatBlock = np.abs(fine)
         magnitude *= np.float32(times)
-        full, _ = self._magnitude.take(magnitude)
-        if full is None:  # cannot be: a hop goes in, a hop comes out
-            return np.zeros((n_channels, 1, hop), np.float32)
-        audio_spectrum = scipy.fft.rfft(full, axis=1)[:, : self._audio.shape[1]] * self._audio
-        audio: FloatBlock = scipy.fft.irfft(audio_spectrum, self._audio_length, axis=1)
-        return audio[:, None, -hop:]
+        return magnitude
 
 
 def _stacked(taps: Sequence[ComplexTaps]) -> NDArray[np.complex128]:

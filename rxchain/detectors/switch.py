@@ -15,15 +15,18 @@ class DetectorSwitch:
 
     process(candidates, choices) : one float32 block ``(channels, messages, n)`` a detector (their lengths may differ:
         the switch waits for the slowest) and the new choices, (channels, steps), indices of detectors. Returns the
-        chosen audio; a change is faded over the first 30 ms of its step, both detectors adding up to one.
+        chosen audio; a change is faded over 30 ms, both detectors adding up to one, from the middle of its step on: until
+        then a detector that was not running has time to fill its filters.
     """
 
     def __init__(self, n_channels: int, n_messages: int, n_detectors: int, step_samples: int, rate_hz: float) -> None:
         self._shape = n_channels, n_messages
         self._n_detectors = n_detectors
         fade = min(step_samples, max(1, round(_FADE_S * rate_hz)))
-        self._rise = np.ones(step_samples, np.float32)
-        self._rise[:fade] = 0.5 - 0.5 * np.cos(np.pi * (np.arange(fade) + 0.5) / fade)
+        start = max(0, step_samples // 2 - fade)
+        self._rise = np.zeros(step_samples, np.float32)
+        self._rise[start : start + fade] = 0.5 - 0.5 * np.cos(np.pi * (np.arange(fade) + 0.5) / fade)
+        self._rise[start + fade :] = 1.0
         self.reset()
 
     def reset(self) -> None:
