@@ -15,7 +15,8 @@ from rxchain.kernels.overlap_save import WindowedStage
 from rxchain.streams import FloatBlock, Floats
 
 _PIECE_S = 1e-3
-_QUANTUM = 16  # pieces worked on at a time
+_QUANTUM = 64  # pieces worked on at a time; 16 where delay matters, which changes nothing but the cost
+_LIVE_QUANTUM = 16
 _SMOOTH = 8  # half-length of the averaging window, pieces
 _AHEAD = _SMOOTH + 1  # the peak search reaches this far on either side: the window, and the slope between two pieces
 _LOOK = _AHEAD + _SMOOTH + 1  # pieces that must be known after the one whose gain is wanted
@@ -39,17 +40,20 @@ class GainControl(WindowedStage[np.float32]):
     gain_db : float64, (channels,): the gain applied to the latest samples.
     """
 
-    def __init__(self, settings: GainSettings, fixed_db: Floats, n_messages: int, rate_hz: float) -> None:
+    def __init__(
+        self, settings: GainSettings, fixed_db: Floats, n_messages: int, rate_hz: float, live: bool = False
+    ) -> None:
         n_channels = len(fixed_db)
         self._fixed = np.isfinite(fixed_db)
         self._fixed_gain = (10.0 ** (np.where(self._fixed, fixed_db, 0.0) / 20.0)).astype(np.float32)
         self._settings = settings
+        self._quantum = _LIVE_QUANTUM if live else _QUANTUM
         self._piece = n = max(1, round(_PIECE_S * rate_hz))
         self._release_db = settings.release_db_s * n / rate_hz
         hann = 0.5 - 0.5 * np.cos(2 * np.pi * (np.arange(2 * _SMOOTH + 1) + 1) / (2 * _SMOOTH + 2))
         self._hann = hann / hann.sum()
         shape = n_channels, n_messages
-        self._set_up(shape, np.float32, 0, _QUANTUM * n, _LOOK * n, shape)
+        self._set_up(shape, np.float32, 0, self._quantum * n, _LOOK * n, shape)
 
     def reset(self) -> None:
         """As new, with the same settings."""
@@ -72,29 +76,29 @@ class GainControl(WindowedStage[np.float32]):
         peaks_db = 20.0 * np.log10(np.maximum(amplitude.astype(np.float64), 1e-10))
         self._peaks_db = np.concatenate([self._peaks_db, peaks_db], axis=1)
         highest = _sliding_maximum(self._peaks_db, 2 * _AHEAD + 1)
-        self._peaks_db = self._peaks_db[:, _QUANTUM:]
+        self._peaks_db = self._peaks_db[:, self._quantum :]
         # A release of so many decibels a piece is a running maximum of the levels plus the slope.
-        slope = self._release_db * (self._pieces + np.arange(_QUANTUM))
+        slope = self._release_db * (self._pieces + np.arange(self._quantum))
         held = np.maximum.accumulate(np.maximum(highest + slope, self._held[:, None]), axis=1)
         self._held = held[:, -1]
-        self._pieces += _QUANTUM
+        self._pieces += self._quantum
         gain_db = np.minimum(settings.target_dbfs - (held - slope), settings.highest_db)
         self._gains = np.concatenate([self._gains, gain_db], axis=1)
         linear = 10.0 ** (self._gains / 20.0)
-        smooth = np.zeros((n_channels, _QUANTUM))
+        smooth = np.zeros((n_channels, self._quantum))
         for k, weight in enumerate(self._hann, 1):
-            smooth += weight * linear[:, k : k + _QUANTUM]
+            smooth += weight * linear[:, k : k + self._quantum]
         smooth = smooth.astype(np.float32)
         smooth = np.where(self._fixed[:, None], self._fixed_gain[:, None], smooth)
-        self._gains = self._gains[:, _QUANTUM:]
+        self._gains = self._gains[:, self._quantum :]
         before = np.concatenate([self._last[:, None], smooth[:, :-1]], axis=1)
         self._last = smooth[:, -1]
         self.gain_db = 20.0 * np.log10(smooth[:, -1])
         rise = ((np.arange(n) + 0.5) / n).astype(np.float32)
         gain = (before[:, :, None] + (smooth - before)[:, :, None] * rise).reshape(n_channels, 1, -1)
         self._audio = np.concatenate([self._audio, window], axis=2)
-        levelled: FloatBlock = self._audio[:, :, : _QUANTUM * n] * gain
-        self._audio = self._audio[:, :, _QUANTUM * n :]
+        levelled: FloatBlock = self._audio[:, :, : self._quantum * n] * gain
+        self._audio = self._audio[:, :, self._quantum * n :]
         return levelled
 
 

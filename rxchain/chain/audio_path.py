@@ -24,13 +24,18 @@ class AudioPath:
     """
 
     def __init__(
-        self, channels: Sequence[ChannelSettings], n_messages: int, squelch_step: int, channel_rate_hz: float
+        self,
+        channels: Sequence[ChannelSettings],
+        n_messages: int,
+        squelch_step: int,
+        channel_rate_hz: float,
+        live: bool,
     ) -> None:
         n = len(channels)
         fixed_db = np.array([fixed_gain_db(channel.agc_db) for channel in channels])
         always = np.array([channel.squelch_db == OFF for channel in channels])
         self.is_automatic: Bools = np.isnan(fixed_db)
-        self._gain = GainControl(GainSettings(), fixed_db, n_messages, channel_rate_hz)
+        self._gain = GainControl(GainSettings(), fixed_db, n_messages, channel_rate_hz, live)
         self._gate = Gate(n, n_messages, squelch_step, channel_rate_hz, always)
         self.rate_hz = delivered_rate_hz(channel_rate_hz)
         self._converter = (

@@ -48,7 +48,7 @@ class ChannelGroup:
             np.array([np.nan if db in (AUTO, OFF) else float(db) for db in thresholds_db]),
         )
         self._detectors = DetectorSet(kind, channels, self.rate_hz, usable_hz)
-        self._audio = AudioPath(channels, kind.n_messages, self._squelch.step_samples, self.rate_hz)
+        self._audio = AudioPath(channels, kind.n_messages, self._squelch.step_samples, self.rate_hz, kind.live)
         self.audio_rate_hz = self._audio.rate_hz
         n = len(channels)
         self._locked_hops = np.zeros(n, np.int64)

@@ -126,7 +126,7 @@ class GroupMeters:
         spectra = self._spectra.transform(frames[:, 1:])
         density = self._spectra.density(spectra)
         self._floor.add(density, valid)
-        if self._chunks % 2 == 0 or self._chunks < 4:
+        if self._chunks % 4 == 0 or self._chunks < 4:
             self._floor.estimate()
         upright = window[:, self._frame :]
         phase, power, locked, amplitude = carrier_blocks(upright, track, self._hop, valid)
