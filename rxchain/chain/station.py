@@ -15,12 +15,12 @@ Every error names the file, the key, the value and the rule.
 
 from __future__ import annotations
 
-import tomllib
 from dataclasses import dataclass
 from pathlib import Path
 
 from rxchain.chain.channel_settings import ChannelSettings, channel_from_table
 from rxchain.errors import RequestError, SettingError
+from rxchain.tables import load_table
 
 _SOURCE_KEYS = ("path", "receiver", "rate", "centre", "capture", "gain", "ppm", "direct_sampling")
 
@@ -36,16 +36,7 @@ class Station:
 
 def load_station(path: Path) -> Station:
     """The station a file describes; raises :class:`RequestError` with the file's name before the fault."""
-    try:
-        table = tomllib.loads(path.read_text(encoding="utf-8"))
-    except FileNotFoundError as error:
-        raise RequestError(f"{path}: no such file") from error
-    except (OSError, UnicodeDecodeError, tomllib.TOMLDecodeError) as error:
-        raise RequestError(f"{path}: not a readable TOML file: {error}") from error
-    try:
-        return _station(table, path.parent)
-    except RequestError as error:
-        raise RequestError(f"{path}: {error}") from error
+    return load_table(path, _station)
 
 
 def _station(table: dict[str, object], folder: Path) -> Station:

@@ -3,6 +3,11 @@
 from __future__ import annotations
 
 import argparse
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+if TYPE_CHECKING:
+    from rxchain.synthesis.render import StationTruth
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -18,8 +23,6 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 
 def run(arguments: argparse.Namespace) -> int:
     """Makes the capture; returns the exit status."""
-    from pathlib import Path
-
     from rxchain.synthesis.capture import write_capture
     from rxchain.synthesis.render import render
     from rxchain.synthesis.scene import load_scene
@@ -34,16 +37,16 @@ def run(arguments: argparse.Namespace) -> int:
     return 0
 
 
-def _write_messages(folder: object, truths: object) -> None:
-    from pathlib import Path
-
+def _write_messages(folder: Path, truths: tuple[StationTruth, ...]) -> None:
     import soundfile
 
-    from rxchain.synthesis.render import StationTruth
+    from rxchain.errors import RequestError
 
-    target = Path(str(folder))
-    target.mkdir(parents=True, exist_ok=True)
-    for truth in truths if isinstance(truths, tuple) else ():
-        if isinstance(truth, StationTruth):
-            path = target / f"{Path(truth.station.name).name}.wav"
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+        for truth in truths:
+            # A name may hold anything; what is written stays in the folder.
+            path = folder / f"{truth.station.name.replace('/', '_').lstrip('.')}.wav"
             soundfile.write(path, truth.messages.T, round(truth.message_rate_hz), subtype="FLOAT")
+    except (OSError, soundfile.LibsndfileError) as error:
+        raise RequestError(f"out={folder}: cannot be written: {error}") from error

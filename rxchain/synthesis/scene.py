@@ -30,7 +30,6 @@
 from __future__ import annotations
 
 import datetime as dt
-import tomllib
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -41,6 +40,7 @@ from rxchain.errors import RequestError, SettingError
 from rxchain.synthesis.messages import KINDS, Message
 from rxchain.synthesis.modulation import Modulation
 from rxchain.synthesis.propagation import F1487, Fading
+from rxchain.tables import load_table
 from rxchain.units import parse_band_hz, parse_frequency_hz
 
 FORMATS = ("cf32_le", "ci16_le", "ci8", "cu8")
@@ -98,16 +98,7 @@ class Scene:
 
 def load_scene(path: Path) -> Scene:
     """The scene a file describes; raises :class:`RequestError` that starts with the file's name."""
-    try:
-        table = tomllib.loads(path.read_text(encoding="utf-8"))
-    except FileNotFoundError as error:
-        raise RequestError(f"{path}: no such file") from error
-    except (OSError, UnicodeDecodeError, tomllib.TOMLDecodeError) as error:
-        raise RequestError(f"{path}: not a readable TOML file: {error}") from error
-    try:
-        return _scene(table, path.parent)
-    except RequestError as error:
-        raise RequestError(f"{path}: {error}") from error
+    return load_table(path, _scene)
 
 
 def _scene(table: Mapping[str, Any], folder: Path) -> Scene:
