@@ -142,7 +142,7 @@ def _row(channel: ChannelStatus, width: int, glyphs: Glyphs) -> list[Text]:
     wide, medium = width >= WIDE, width >= MEDIUM
     figures = channel.recent
     snr, rise, fall = figures.snr_db, figures.depth_positive_percent, figures.depth_negative_percent
-    over = (fall is not None and fall.value > 100.0) or (rise is not None and rise.value > 125.0)
+    over = bool((fall is not None and fall.value > 100.0) or (rise is not None and rise.value > 125.0))
     lock = (LOCK_WORDS if wide else SHORT_LOCK_WORDS).get(channel.lock, channel.lock)
     cells = [Text(clean(channel.name))]
     if medium:

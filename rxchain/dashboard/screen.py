@@ -38,6 +38,7 @@ class Dashboard:
         self._status: ReceiverStatus | None = None
         self._selected = 0
         self._ended = threading.Event()
+        self._failure: Exception | None = None
 
     def show(self, status: ReceiverStatus) -> None:
         """Takes the latest snapshot."""
@@ -59,8 +60,16 @@ class Dashboard:
             finally:
                 self._ended.set()
                 thread.join(timeout=2.0)
+        if self._failure is not None:
+            print(f"the dashboard stopped: {self._failure!r}; reception went on", file=sys.stderr)
 
     def _draw(self, live: Live, stop: Callable[[], None]) -> None:
+        try:
+            self._draw_until_ended(live, stop)
+        except Exception as error:
+            self._failure = error  # reception goes on without a picture; what happened is said at the end
+
+    def _draw_until_ended(self, live: Live, stop: Callable[[], None]) -> None:
         while not self._ended.is_set():
             status = self._status
             if status is not None:

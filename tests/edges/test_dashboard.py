@@ -184,3 +184,58 @@ def test_plain_lines_come_at_their_time_and_survive_a_reader_that_goes():
     broken = PlainLines(Gone(), lambda: 0.0)
     with broken.running(lambda: None):
         broken.show(status([channel()]))
+
+
+def test_snapshots_of_a_real_run_are_drawn_from_first_to_last():
+    """The first snapshots have no figures yet, the later ones have all kinds of them, as the meters make them."""
+    from scenes import channel_text, one_of_each
+
+    from rxchain.chain.channel_settings import channel_from_text
+    from rxchain.chain.receiver import Receiver
+    from rxchain.chain.runner import Runner
+    from rxchain.sources.protocol import SourceInfo
+    from rxchain.streams import Block
+    from rxchain.synthesis.render import render
+    from rxchain.synthesis.scene import Scene
+
+    scene = Scene(288_000.0, 1e6, 3.0, tuple(one_of_each()), noise_dbfs_hz=-95.0)
+    iq = render(scene).iq
+    info = SourceInfo("recording", "scene", 288_000.0, 1e6, None, len(iq))
+    receiver = Receiver(info, tuple(channel_from_text(channel_text(one)) for one in scene.stations))
+    shown = []
+
+    class Recorded:
+        info = receiver.info
+
+        def blocks(self):
+            yield from (Block(iq[k : k + 28_800], k) for k in range(0, len(iq), 28_800))
+
+        def close(self):
+            pass
+
+    class Nowhere:
+        def write(self, audio):
+            pass
+
+    ticks = iter(range(10_000))
+    Runner(Recorded(), receiver, Nowhere(), lambda: float(next(ticks)), shown.append).run()
+    assert len(shown) > 20
+    for snapshot in shown:
+        for width, height in ((80, 24), (120, 40)):
+            lines = drawn(snapshot, width, height)
+            assert max(map(len, lines)) <= width
+    assert "a3e" in "\n".join(drawn(shown[-1], 120, 40))
+    assert "locked" in "\n".join(drawn(shown[-1], 120, 40))
+
+
+def test_a_failing_picture_does_not_stop_the_run(capsys, monkeypatch):
+    dashboard = Dashboard(Console(file=io.StringIO(), _environ={}))
+
+    def broken(*_):
+        raise ValueError("no picture")
+
+    monkeypatch.setattr("rxchain.dashboard.screen.picture", broken)
+    dashboard.show(status([channel()]))
+    with dashboard.running(lambda: None):
+        dashboard._ended.wait(0.01)
+    assert "no picture" in capsys.readouterr().err
