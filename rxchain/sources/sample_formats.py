@@ -9,6 +9,8 @@ from numpy.typing import NDArray
 
 from rxchain.streams import ComplexBlock
 
+LARGEST_SAMPLE = np.float32(1e4)  # 80 dB over full scale: nothing a receiver writes
+
 
 @dataclass(frozen=True, slots=True)
 class SampleFormat:
@@ -32,13 +34,13 @@ class SampleFormat:
     def decode(self, components: NDArray[np.generic]) -> tuple[ComplexBlock, int]:
         """Samples, and how many of them are overloaded, from interleaved components (I first).
 
-        In a floating-point file a sample that is no finite number becomes 0 and counts as overloaded: it must not
-        poison what comes after it.
+        In a floating-point file a sample that is no finite number, or an absurd one, becomes 0 and counts as
+        overloaded: it must not poison what comes after it.
         """
         values = np.empty(len(components), np.float32)
         np.subtract(components, np.float32(self.offset), out=values, dtype=np.float32, casting="unsafe")
         if self.low is None or self.high is None:
-            bad = ~np.isfinite(values)
+            bad = ~(np.abs(values) <= LARGEST_SAMPLE)  # true of what is no number, too
             values[bad] = 0.0
             over = bad.reshape(-1, 2).any(axis=1)
         else:

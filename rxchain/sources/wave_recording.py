@@ -16,7 +16,7 @@ from rxchain.errors import SettingError, SourceError, SourceLost
 from rxchain.sources.protocol import SourceInfo
 from rxchain.sources.raw_recording import file_size
 from rxchain.sources.sample_file import Stretch, block_length, read_blocks
-from rxchain.sources.sample_formats import CI16
+from rxchain.sources.sample_formats import CI16, LARGEST_SAMPLE
 from rxchain.streams import Block
 
 _RAIL = 1.0 - 2.0**-15  # highest value of a 16-bit converter
@@ -87,7 +87,7 @@ class WaveRecording:
 
 def _decoded(frames: np.ndarray, is_float: bool) -> tuple[np.ndarray, int]:
     if is_float:
-        over = ~np.isfinite(frames)
+        over = ~(np.abs(frames) <= LARGEST_SAMPLE)
         frames = np.where(over, np.float32(0), frames)
     else:
         over = (frames <= -1.0) | (frames >= _RAIL)
