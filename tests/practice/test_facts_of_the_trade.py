@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 from signals import distortion_percent, fit, hilbert, noise_message, through, tone_lines
 
+from rxchain.detectors import vestigial
 from rxchain.detectors.coherent import CoherentDetector
 from rxchain.detectors.envelope import EnvelopeDetector, emission_band
 from rxchain.detectors.sidebands import both_sidebands, one_sideband, quarter_turned
@@ -76,13 +77,26 @@ def test_an_envelope_detector_is_faithful_while_the_carrier_exceeds_the_message(
     assert coherent_db < CLEAN_DB
 
 
+@pytest.mark.parametrize(("carrier", "is_faithful"), [(0.7, False), (0.95, False), (1.0, True), (1.5, True)])
+def test_a_carrier_added_to_a_suppressed_one_must_exceed_the_peak(carrier, is_faithful):
+    """Common practice: with a carrier put back at the receiver an envelope detector does, if it is strong enough."""
+    message = tone(300.0)  # its peak is 1, and it is there all the time
+    sent = modulate(EMISSIONS["DSB-SC"], message[None], RATE_HZ, Modulation())
+    _, left_db = fit(envelope(sent.envelope + carrier), message[STEADY])
+    assert (left_db < CLEAN_DB) == is_faithful
+
+
 def test_efficiency_is_sideband_power_over_total_power():
     """Common practice: what is left when the carrier is taken out is all that carries the message."""
     message = noise_message(N, RATE_HZ, 100.0, 4_500.0, 7)
     iq = modulate(EMISSIONS["A3E"], message[None], RATE_HZ, Modulation(depth=0.9)).envelope
-    sidebands = 0.81 * np.mean(message**2)
-    total = np.mean(np.abs(iq) ** 2)
-    assert (total - np.abs(iq.mean()) ** 2) / total == pytest.approx(sidebands / (1 + sidebands), rel=1e-6)
+    total = np.mean(np.abs(iq[STEADY]) ** 2)
+    heard = np.mean(coherent(BAND, iq)[0] ** 2)  # both sidebands fold onto the message and bring all their power
+    sent = 0.81 * np.mean(message[STEADY] ** 2)
+    mean = 2 * 0.9 * np.mean(message[STEADY])  # what the stretch at hand is off the message's mean of 0
+    assert heard / total == pytest.approx(sent / (1 + sent + mean), rel=1e-3)
+    upper = coherent(one_sideband(Side.UPPER, 100.0, 4_500.0, RATE_HZ), iq)[0]
+    assert np.mean(upper**2) / heard == pytest.approx(0.25, rel=0.01)  # half the voltage by one sideband
 
 
 def test_two_messages_share_a_band_in_quadrature_and_come_apart_only_coherently():
@@ -132,10 +146,17 @@ def test_carrier_needed_by_an_envelope_detector_grows_from_double_to_vestigial_t
             iq = modulate(EMISSIONS[name], message[None], RATE_HZ, how).envelope
         return distortion_percent(tone_lines(envelope(iq), RATE_HZ, 500.0, orders=8))
 
-    depths = np.linspace(0.02, 1.0, 50)
-    greatest = {
-        name: max(depth for depth in depths if distortion(name, depth) <= 5.0) for name in ("A3E", "C3E-USB", "J3E-USB")
-    }
+    def greatest_depth(name):
+        """By halving: distortion grows with depth."""
+        low, high = 0.02, 1.0
+        if distortion(name, high) <= 5.0:
+            return high
+        while high - low > 0.01:
+            middle = (low + high) / 2
+            low, high = (middle, high) if distortion(name, middle) <= 5.0 else (low, middle)
+        return low
+
+    greatest = {name: greatest_depth(name) for name in ("A3E", "C3E-USB", "J3E-USB")}
     # The greater the sidebands that 5 % allows, the less carrier is needed for them.
     assert greatest["A3E"] > 1.3 * greatest["C3E-USB"] > 1.3 * 1.3 * greatest["J3E-USB"]
 
@@ -150,3 +171,23 @@ def test_a_vestigial_emission_is_one_and_a_quarter_to_one_and_a_half_bandwidths_
         occupied_hz = np.fft.fftfreq(N, 1 / RATE_HZ)[spectrum > 1e-6 * spectrum.max()]
         width = (occupied_hz.max() - occupied_hz.min()) / 4_000.0
         assert 1.0 + share - 0.03 < width < 1.0 + share + 0.03
+
+
+def test_receiver_and_transmitter_slopes_must_add_up_to_a_constant():
+    """Common practice: transmitter times receiver, above the carrier plus below it, is the message's response. Where the
+    slopes match the message comes out flat; one that is wider than the other tilts the lows.
+    """
+    message = noise_message(N, RATE_HZ, 100.0, 4_500.0, 14)
+    how = Modulation(vestige_hz=1_000.0)
+    sent = modulate(EMISSIONS["VSB-SC-USB"], message[None], RATE_HZ, how)
+
+    def left_over_db(weight):
+        taps = vestigial.vestigial(Side.UPPER, weight, BAND, RATE_HZ)
+        return fit(coherent(taps, sent.envelope)[0], sent.messages[0, STEADY])[1]
+
+    # Complementary sent slopes added as they are, and the best weighting: both products add up to 1.
+    assert left_over_db(np.ones_like) < CLEAN_DB
+    assert left_over_db(lambda f: vestigial.weight_for_sent(f, 1_000.0)) < CLEAN_DB
+    # The same slope again at the receiver squares it: at the carrier a quarter and a quarter make a half.
+    assert left_over_db(lambda f: vestigial.sent_slope(f, 1_000.0)) > -30.0
+    assert left_over_db(lambda f: vestigial.weight_for_sent(f, 2_000.0)) > -30.0
