@@ -3,9 +3,8 @@
 Two statistics of spectra averaged over about 50 ms, both blind to the level of the noise: the density within the
 emission's own band over that of the quiet neighbourhood, and the unevenness of the band itself (the logarithm of the
 mean less the mean of the logarithms: 0 for flat noise at infinite averaging, large for lines and for speech). Either
-opens; it closes a second after both have fallen. A step of
-the noise of 6 dB or less moves neither; one of 20 dB opens for the hang time, most times, because its first loud frame
-outweighs the three averaged with it.
+opens; it closes a second after both have fallen. A step of the noise of 6 dB or less moves neither; one of 20 dB mostly
+opens it for that second, because the first loud frame outweighs the three averaged with it.
 """
 
 from __future__ import annotations

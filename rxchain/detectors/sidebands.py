@@ -22,8 +22,9 @@ def transition_hz(low_hz: float) -> float:
 def both_sidebands(low_hz: float, high_hz: float, rate_hz: float, steep: bool = False) -> ComplexTaps:
     """Band-pass for the real part: flat from ``low_hz`` to ``high_hz``, nothing at 0 Hz where the carrier is.
 
-    A low edge under 200 Hz is made by subtracting a running mean, exact at the carrier whatever the rounding; its gain falls gently from ``low_hz`` to exactly 0 at the carrier. ``steep`` makes the slope all the same, for
-    emissions that send something else between the carrier and the message.
+    A low edge under 200 Hz is made by subtracting a running mean: its gain falls gently from ``low_hz`` to exactly 0 at
+    the carrier. ``steep`` makes the slope all the same, for emissions that send something else between the carrier and
+    the message.
     """
     slope_hz = min(_WIDEST_TRANSITION_HZ, rate_hz / 2.0 - high_hz)
     if steep or low_hz >= _MEAN_EDGE_HZ:
