@@ -8,7 +8,6 @@ the phase scatters about it at short and at longer lags: white noise averages ou
 from __future__ import annotations
 
 import numpy as np
-from numpy.typing import NDArray
 
 from rxchain.carrier.track import Lock, Track
 from rxchain.streams import Bools, ComplexBlock, Floats
@@ -87,10 +86,8 @@ class CarrierSums:
         return np.where(blocks > 0, power / np.maximum(blocks, 1.0), np.nan)
 
 
-def carrier_blocks(
-    iq: ComplexBlock, track: Track, hop: int, valid: Bools
-) -> tuple[Floats, Floats, Bools, NDArray[np.float64]]:
-    """Phase in cycles, power, and lock of each block, and the mean amplitude on the real axis; (channels, blocks) each.
+def carrier_blocks(iq: ComplexBlock, track: Track, hop: int, valid: Bools) -> tuple[Floats, Floats, Bools]:
+    """Phase in cycles, power, and lock of each block; (channels, blocks) each.
 
     iq holds whole blocks of upright samples, track its hops. A block counts as locked where all its hops are.
     """
@@ -99,7 +96,7 @@ def carrier_blocks(
     means = iq.reshape(n_channels, n_blocks, BLOCK_HOPS * hop).mean(axis=2, dtype=np.complex128)
     taken_out = track.phase_cycles.reshape(n_channels, n_blocks, BLOCK_HOPS).mean(axis=2)
     locked = (track.lock.reshape(n_channels, n_blocks, BLOCK_HOPS) == Lock.LOCKED).all(axis=2) & valid[:, None]
-    return taken_out + np.angle(means) / (2 * np.pi), np.abs(means) ** 2, locked, means.real
+    return taken_out + np.angle(means) / (2 * np.pi), np.abs(means) ** 2, locked
 
 
 def _about_means(sums: Floats) -> Floats:

@@ -11,14 +11,15 @@ from numpy.lib.stride_tricks import sliding_window_view
 from numpy.typing import NDArray
 
 from rxchain.carrier.hops import hop_samples
-from rxchain.carrier.track import Track, Turned
+from rxchain.carrier.track import Lock, Track, Turned
+from rxchain.detectors.stereo import sum_and_difference
 from rxchain.emissions import Reference
 from rxchain.kernels.overlap_save import Windows
 from rxchain.meters.carrier_figures import BLOCK_HOPS, CarrierSums, carrier_blocks
 from rxchain.meters.depth import RECENT_CHUNKS, DepthMeter
 from rxchain.meters.figures import Figures
 from rxchain.meters.noise_floor import LEAST_NOISE_SHARE, NoiseFloor
-from rxchain.meters.readings import efficiency_reading, level_reading, ratio_reading_db, snr_reading
+from rxchain.meters.readings import efficiency_reading, level_reading, noise_error, ratio_reading_db, snr_reading
 from rxchain.meters.spectra import FRAMES, MessageSpectra, MeteredChannel
 from rxchain.meters.tally import Tally
 from rxchain.streams import Bools, Floats, Reading
@@ -29,6 +30,13 @@ __all__ = ["GroupMeters", "MeteredChannel"]
 _CHUNK_HOPS = 48  # 0.26 s
 _BESIDE_HZ = 2_500.0
 _PRESENT_RATIO = 0.2  # message power over noise power, in a chunk, that counts as something being sent
+_PRESENT_DEVIATIONS = 3.0  # of the noise, by which it must exceed that
+# Relative error of the noise floor that stays however long one measures: where the emission fills the channel the floor
+# is what shows between its words, and some of them is always taken for noise (measured on voices).
+_LEAST_BIAS, _BIAS_OF_FULL_CHANNEL = 0.007, 0.06
+_BIAS_OF_STEREO = 0.04  # what the law of quadrature stereo scatters beyond its messages
+_LEAST_CARRIER = 0.1  # of the power found at its place
+_DOUBT_OF_WEAK = 0.6  # share of a peak
 _HANG_CHUNKS = 6  # a pause of about a second and a half still belongs to the message
 
 
@@ -49,9 +57,15 @@ class GroupMeters:
         # The floor is looked for near the emission: a recording may have been filtered narrower than its rate.
         reaches_hz = [_reach_hz(channel) for channel in channels]
         self._usable_hz = min(usable_hz, max(reaches_hz))
+        self._occupied = np.minimum(self._spectra.sideband_width_hz / (2.0 * self._usable_hz), 1.0)
+        self._is_stereo: Bools = np.array([channel.emission.family == "AM-STEREO" for channel in channels])
         self._has_depth: Bools = np.array([channel.emission.has_depth for channel in channels])
         self._has_carrier: Bools = np.array(
             [channel.emission.reference is not Reference.NOMINAL for channel in channels]
+        )
+        # Without a carrier's phase these are no messages: what came before the first lock does not count.
+        self._needs_phase: Bools = np.array(
+            [c.emission.reference is Reference.SQUARE and c.sideband == "both" for c in channels]
         )
         self._by_lock: Bools = np.array([channel.emission.reference is Reference.CARRIER for channel in channels])
         self._bands = [channel.audio_hz for channel in channels]
@@ -73,6 +87,7 @@ class GroupMeters:
         self._recent: deque[Tally] = deque(maxlen=RECENT_CHUNKS)
         self._waiting: deque[Tally] = deque()
         self._heard_before = np.full(n, _HANG_CHUNKS + 1)
+        self._was_locked: Bools = np.zeros(n, bool)
         self._recent_carriers: deque[tuple[Floats, Floats, Bools]] = deque(maxlen=RECENT_CHUNKS)
 
     def mark_lost(self, first_sample: int, n_samples: int) -> None:
@@ -106,7 +121,7 @@ class GroupMeters:
         tally = Tally(n, self._spectra.n_messages)
         tally.add(self._total, np.ones(n, bool))
         for chunk in self._waiting:  # what may still turn out to be a pause counts as present while it is the last
-            tally.add(chunk, chunk.present | (self._heard_before <= _HANG_CHUNKS))
+            tally.add(chunk, chunk.present | (~self._by_lock & (self._heard_before <= _HANG_CHUNKS)))
         return self._figures(tally, self._carrier, self._depth.peaks())
 
     def _take_track(self) -> Track:
@@ -123,23 +138,36 @@ class GroupMeters:
         n = len(self._channels)
         valid = np.full(n, not any(start < last and stop > first for start, stop in self._lost))
         frames = sliding_window_view(window, self._frame, axis=1)[:, ::half]
-        spectra = self._spectra.transform(frames[:, 1:])
+        # Before the stream's first sample there is nothing to measure.
+        spectra = self._spectra.transform(frames[:, 2 if self._chunks == 1 else 1 :])
         density = self._spectra.density(spectra)
         self._floor.add(density, valid)
         if self._chunks % 4 == 0 or self._chunks < 4:
             self._floor.estimate()
         upright = window[:, self._frame :]
-        phase, power, locked, amplitude = carrier_blocks(upright, track, self._hop, valid)
+        phase, power, locked = carrier_blocks(upright, track, self._hop, valid)
         self._carrier.add(phase, power, locked)
         self._recent_carriers.append((phase, power, locked))
         is_locked: Bools = np.asarray(locked.all(axis=1))
-        messages = self._spectra.message_power(spectra)
+        amplitude, mean = self._spectra.amplitude(spectra), density.mean(axis=1, dtype=np.float64)
         chunk = Tally(n, self._spectra.n_messages)
-        self._fill(chunk, valid, upright, density, messages, power.mean(axis=1), is_locked)
+        chunk.sidebands = self._spectra.sideband_power(mean)
+        if self._is_stereo.any():
+            # Left and right are linear only in what the law of quadrature stereo makes of the channel.
+            by_law = sum_and_difference(window[self._is_stereo])
+            frames_by_law = sliding_window_view(by_law, self._frame, axis=1)[:, ::half]
+            spectra[self._is_stereo] = self._spectra.transform(frames_by_law[:, -spectra.shape[1] :])
+            density = self._spectra.density(spectra)
+            mean = density.mean(axis=1, dtype=np.float64)
+        messages, leaked = self._spectra.message_power(spectra, density, mean)
+        chunk.leaked = np.where(is_locked, leaked, 0.0)
+        is_followed: Bools = np.asarray((track.lock != Lock.NONE).all(axis=1))
+        self._fill(chunk, valid, upright, messages, power.mean(axis=1), is_locked, is_followed)
         if self._has_depth.any():
-            self._depth.process(
-                frames, upright, amplitude.mean(axis=1), chunk.floor, is_locked & self._has_depth & valid
-            )
+            # The window reaches back into the chunk before.
+            can_tell = is_locked & self._was_locked & self._has_depth & valid
+            self._depth.process(frames, window[:, half:-half], amplitude, chunk.floor, can_tell)
+        self._was_locked = is_locked
         self._recent.append(chunk)
         self._settle(chunk)
 
@@ -148,17 +176,19 @@ class GroupMeters:
         chunk: Tally,
         valid: Bools,
         upright: NDArray[np.complex64],
-        density: NDArray[np.float32],
         messages: Floats,
         carrier_power: Floats,
         locked: Bools,
+        is_followed: Bools,
     ) -> None:
         """One chunk's sums; channels whose samples were lost add nothing."""
+        width_hz, with_edges_hz = self._spectra.noise_bandwidth_hz, self._spectra.width_with_edges_hz
         floor = np.where(np.isnan(self._floor.density), 0.0, self._floor.density)
-        noise = floor[:, None] * self._spectra.noise_bandwidth_hz
         by_quadrature = self._spectra.is_double & locked
-        noise[by_quadrature, 0] = messages[by_quadrature, -1]
-        floor = np.where(by_quadrature, noise[:, 0] / np.maximum(self._spectra.noise_bandwidth_hz[:, 0], 1.0), floor)
+        own = messages[:, -1] / np.maximum(with_edges_hz[:, -1], 1.0)
+        floor = np.where(by_quadrature, own, floor)
+        noise = floor[:, None] * width_hz
+        messages = messages - floor[:, None] * (with_edges_hz - width_hz)
         chunk.by_quadrature = by_quadrature.astype(np.float64)
         chunk.chunks = valid.astype(np.float64)
         chunk.level = np.mean(np.square(upright.real) + np.square(upright.imag), axis=1, dtype=np.float64)
@@ -167,15 +197,15 @@ class GroupMeters:
         chunk.noise = noise
         chunk.floor = floor
         chunk.floor_error = np.nan_to_num(self._floor.relative_error, nan=1.0)
+        chunk.floor_bias = _LEAST_BIAS + _BIAS_OF_FULL_CHANNEL * self._occupied**3 + _BIAS_OF_STEREO * self._is_stereo
         chunk.noise_share = self._floor.noise_share
-        chunk.sidebands = self._spectra.sideband_power(density)
         chunk.carrier = np.where(locked, carrier_power, 0.0)
         chunk.locked = locked.astype(np.float64)
         rows = np.arange(messages.shape[1]) < self._spectra.n_messages[:, None]
         signal = (messages * rows).sum(axis=1)
         background = (noise * rows).sum(axis=1)
-        sent = signal > (1.0 + _PRESENT_RATIO) * background
-        chunk.present = np.where(self._by_lock, locked, sent) & valid
+        sent = signal > (1.0 + _PRESENT_RATIO + _PRESENT_DEVIATIONS * chunk.floor_error) * background
+        chunk.present = np.where(self._by_lock, locked, sent & (is_followed | ~self._needs_phase)) & valid
         chunk.keep_only(valid)
 
     def _settle(self, chunk: Tally) -> None:
@@ -202,14 +232,18 @@ class GroupMeters:
             sent_carrier = self._has_carrier[k] and channel.emission.reference is not Reference.SQUARE
             if sent_carrier and np.isfinite(power[k]) and tally.mean("floor", k) > 0:
                 floor = tally.mean("floor", k)
-                carrier_power = max(power[k] - floor / block_s, 1e-30)
+                carrier_power = max(power[k] - floor / block_s, _LEAST_CARRIER * power[k])
                 seconds = max(carrier.seconds[k], block_s)
-                relative2 = 2 * floor / (carrier_power * seconds) + tally.floor_error_of(k) ** 2
+                relative2 = 2 * floor / (carrier_power * seconds) + noise_error(tally, k, width_hz, chunk_s) ** 2
                 cn0 = ratio_reading_db(carrier_power / floor, np.sqrt(relative2))
                 efficiency = efficiency_reading(tally, k, carrier_power, self._spectra.sideband_width_hz[k], chunk_s)
             depth: list[Reading | None] = [None, None, None]
             if self._has_depth[k] and any_depth[k]:
-                depth = _depth_readings(positive[k], positive_sigma[k], negative[k], negative_sigma[k])
+                # Of a message under the noise the peaks may be the noise's as well.
+                is_weak = tally.message[k, :n_messages].sum() < 2.0 * tally.noise[k, :n_messages].sum()
+                doubt = _DOUBT_OF_WEAK * np.array([positive[k], negative[k]]) if is_weak else np.zeros(2)
+                rise_sigma, fall_sigma = np.hypot([positive_sigma[k], negative_sigma[k]], doubt)
+                depth = _depth_readings(positive[k], rise_sigma, negative[k], fall_sigma)
             offset = None
             if self._has_carrier[k] and np.isfinite(offset_hz[k]):
                 offset = Reading(float(offset_hz[k]), float(offset_sigma_hz[k]))

@@ -50,9 +50,9 @@ class NoiseFloor:
 
     def add(self, density: NDArray[np.float32], valid: Bools) -> None:
         """A chunk's densities, (channels, frames, bins); chunks that are not ``valid`` (channels,) leave no cells."""
-        n_channels, n_frames, _ = density.shape
-        cells = density[:, :, self._bins].reshape(
-            n_channels, n_frames // _CELL_FRAMES, _CELL_FRAMES, len(self._bins) // _CELL_BINS, _CELL_BINS
+        n_channels, n_rows = len(density), density.shape[1] // _CELL_FRAMES
+        cells = density[:, -n_rows * _CELL_FRAMES :, self._bins].reshape(
+            n_channels, n_rows, _CELL_FRAMES, len(self._bins) // _CELL_BINS, _CELL_BINS
         )
         level_db = 10.0 * np.log10(cells.mean(axis=(2, 4)).reshape(n_channels, -1) + 1e-30)
         level = np.clip(((level_db - _LOWEST_DB) / _STEP_DB).astype(np.int64), 0, _LEVELS - 1)
@@ -83,9 +83,8 @@ class NoiseFloor:
             estimate = 0.5 * estimate + 0.5 * mean / _MEAN_BELOW
         with np.errstate(invalid="ignore", divide="ignore"):
             share = np.clip(below / np.maximum(cells, 1.0) / _SHARE_BELOW, 0.0, 1.0)
-            error = np.sqrt(4.0 / (_AVERAGES * np.maximum(below, 1.0)) + (0.23 * (0.03 + 0.15 * (1.0 - share))) ** 2)
+            error = np.sqrt(4.0 / (_AVERAGES * np.maximum(below, 1.0)) + (0.23 * (0.02 + 0.1 * (1.0 - share))) ** 2)
         known = cells > 0
         self.noise_share = np.where(known, share, 0.0)
-        # What is still mixed into the lowest cells, as measured on voices.
-        self.density = np.where(known, estimate * 10.0 ** (-0.02 * (1.0 - share)), np.nan)
+        self.density = np.where(known, estimate, np.nan)
         self.relative_error = np.where(known, error, np.nan)

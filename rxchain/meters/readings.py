@@ -8,15 +8,29 @@ from rxchain.meters.tally import Tally
 from rxchain.streams import Reading
 
 _DB = 10.0 / np.log(10.0)
-# What remains however long one measures: the grid of the meter's bins against the edges of the detector's filter, and
-# what phase noise leaks of the message into its quadrature.
-_SNR_FLOOR = 0.012
+# What remains however long one measures: the grid of the meter's bins against the edges of the detector's filter.
+_SNR_FLOOR = 0.005
+# How much may be left of a message that was taken out of the quadrature component: power, measured on shaken phases and
+# unequal sidebands.
+_LEFT_OF_LEAK = 0.006
 _LEVEL_FLOOR_DB = 0.02
+_LEAST_RATIO_ERROR, _LEAST_SHARE_ERROR = 0.005, 1e-4
+_SURELY_SENT = 3.0  # deviations by which a message must exceed nothing
 
 
 def ratio_reading_db(ratio: float, relative_error: float) -> Reading:
     """A power ratio in decibels, from its relative error."""
     return Reading(float(10.0 * np.log10(ratio)), float(_DB * max(relative_error, 0.003)))
+
+
+def noise_error(tally: Tally, channel: int, width_hz: float, chunk_s: float) -> float:
+    """Relative error of the mean noise: of what the quadrature component held, or of the floor where there is none."""
+    quadrature = tally.mean("by_quadrature", channel)
+    samples = max(width_hz * float(tally.chunks[channel]) * chunk_s, 1.0)
+    noise = max(tally.mean("floor", channel) * width_hz, 1e-300)
+    left = _LEFT_OF_LEAK * tally.mean("leaked", channel) / noise
+    own = float(np.sqrt(1.0 / samples + _SNR_FLOOR**2 + left**2))
+    return quadrature * own + (1.0 - quadrature) * tally.floor_error_of(channel)
 
 
 def snr_reading(
@@ -32,15 +46,14 @@ def snr_reading(
         return None
     total = float(tally.message[channel, :n_messages].sum()) / chunks
     noise = float(tally.noise[channel, :n_messages].sum()) / chunks
-    quadrature = float(tally.by_quadrature[channel]) / chunks
+    quadrature = tally.mean("by_quadrature", channel)
     if noise <= 0 or (quadrature < 0.5 and tally.mean("noise_share", channel) < least_noise_share):
         return None
     snr = total / noise - 1.0
     samples = width_hz * chunks * chunk_s
-    own = np.sqrt(1.0 / samples + _SNR_FLOOR**2)
-    error = quadrature * own + (1.0 - quadrature) * tally.floor_error_of(channel)
+    error = noise_error(tally, channel, width_hz, chunk_s)
     deviation = float(np.sqrt((1.0 + snr) ** 2 * error**2 + max(1.0 + 2.0 * snr, 0.0) / samples))
-    if snr <= 2.0 * deviation and snr < 0.05:
+    if snr < _SURELY_SENT * np.sqrt(error**2 + 1.0 / samples):  # as nothing would do by chance
         return None
     return Reading(float(10.0 * np.log10(snr)), float(_DB * max(deviation / snr, 0.003)))
 
@@ -68,7 +81,9 @@ def efficiency_reading(
     sidebands = tally.mean("sidebands", channel) - noise
     share = max(sidebands, 0.0) / (max(sidebands, 0.0) + carrier_power)
     samples = max(width_hz * chunks * chunk_s, 1.0)
-    error2 = (noise * tally.floor_error_of(channel)) ** 2
+    error2 = (noise * noise_error(tally, channel, width_hz, chunk_s)) ** 2
     error2 += (2.0 * max(sidebands, 0.0) * noise + noise**2) / samples
     deviation = np.sqrt(error2) * carrier_power / (max(sidebands, 0.0) + carrier_power) ** 2
-    return Reading(100.0 * share, float(np.hypot(100.0 * deviation, 0.02)))
+    # What the edges of the bins and of the chunks leave unsure of either power.
+    ratio = _LEAST_RATIO_ERROR * share * (1.0 - share)
+    return Reading(100.0 * share, float(100.0 * np.hypot(np.hypot(deviation, ratio), _LEAST_SHARE_ERROR)))

@@ -15,8 +15,10 @@ class Tally:
     """Sums over chunks; each float64, (channels,) or (channels, rows).
 
     chunks, locked, by_quadrature : how many chunks in all, with the carrier followed, with noise read from quadrature.
+    leaked : power of message taken out of the quadrature component.
     level, level_squared : mean power. message : power of each message, noise included; noise : the noise in it.
-    floor, floor_error, noise_share : the channel's noise density, its relative error, and what it rests on.
+    floor, floor_error, floor_bias, noise_share : the channel's noise density, its relative error, the part of it that no
+        length of time takes away, and the share of cells it rests on.
     sidebands, carrier : power of the sidebands with their noise, and of the carrier while locked.
     present : bool, of a single chunk: whether something was being sent.
     """
@@ -26,12 +28,14 @@ class Tally:
     chunks: Floats = field(init=False)
     locked: Floats = field(init=False)
     by_quadrature: Floats = field(init=False)
+    leaked: Floats = field(init=False)
     level: Floats = field(init=False)
     level_squared: Floats = field(init=False)
     message: Floats = field(init=False)
     noise: Floats = field(init=False)
     floor: Floats = field(init=False)
     floor_error: Floats = field(init=False)
+    floor_bias: Floats = field(init=False)
     noise_share: Floats = field(init=False)
     sidebands: Floats = field(init=False)
     carrier: Floats = field(init=False)
@@ -72,7 +76,7 @@ class Tally:
     def floor_error_of(self, channel: int) -> float:
         """Relative error of the mean noise density: estimates share their window, so that a mean gains little."""
         windows = max(1.0, float(self.chunks[channel]) / 20.0)
-        return self.mean("floor_error", channel) / float(np.sqrt(windows))
+        return float(np.hypot(self.mean("floor_error", channel) / np.sqrt(windows), self.mean("floor_bias", channel)))
 
 
 _ROWS = ("message", "noise")
