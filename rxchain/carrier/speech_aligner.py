@@ -45,8 +45,8 @@ class SpeechAligner:
         look-ahead. offset_hz : float64, (n_channels,): offset of the carrier from its nominal frequency as last
         believed, 0 before; the track's offset glides to it. is_believed : whether it still is.
 
-    A channel counts as locked while the answer is believed and a voice spoke within the last second, and as held
-    whenever it is turned by an answer believed before.
+    A channel counts as locked while the answer is believed and somebody speaks, and otherwise as held, once there was
+    an answer.
     """
 
     def __init__(

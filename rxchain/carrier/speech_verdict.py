@@ -26,7 +26,7 @@ _FIT = 0.40  # of the reward that was to be expected
 _SPREAD = 0.025  # standard deviation of the pitch, as a share of itself
 _VOICED_FRAMES = 8.0
 _REWARD = 8.0  # nepers
-_LINE = 1.5  # over the median; lower ones give no last digit
+_LINE = 1.8  # height over the median; 2 to 20 for voices, and hardly ever above 1.8 for what is none
 _STEADY = 3  # answers
 _MOVED_HZ = 12.0  # a new station, where the quick memory is that far away and believes it
 _REFUTED = 5.0  # nepers: or where it speaks so much against the slow answer
@@ -81,16 +81,14 @@ def judge(likelihood: SpeechLikelihood, line: SpeechLine) -> Judged:
     posterior = np.exp(score - score.max(axis=2, keepdims=True))
     mass = np.where(near, posterior, 0.0).sum(axis=2) / posterior.sum(axis=2)
     near_heights = np.where(near, heights, 0.0)
-    has_line = near_heights.max(axis=2) > _LINE
-    top = np.where(has_line, np.argmax(near_heights, axis=2), top)
-    offset_hz = _parabola(np.where(has_line[:, :, None], heights, score), top, grid_hz)
+    offset_hz = _parabola(heights, np.argmax(near_heights, axis=2), grid_hz)
     counts = likelihood.counts.sums
     reward = np.where(near, rewards, _NONE).max(axis=2)
     fit = reward / np.maximum(counts[:, :, EXPECTED], 1e-3)
     n_voiced = np.maximum(counts[:, :, VOICED], 1e-3)
     variance = counts[:, :, LOG_PERIOD_SQUARED] / n_voiced - (counts[:, :, LOG_PERIOD] / n_voiced) ** 2
     is_good = (mass > _MASS) & (fit > _FIT) & (variance > _SPREAD**2) & (np.abs(offset_hz) < RANGE_HZ)
-    is_good &= (n_voiced > _VOICED_FRAMES) & (reward > _REWARD)
+    is_good &= (n_voiced > _VOICED_FRAMES) & (reward > _REWARD) & (near_heights.max(axis=2) > _LINE)
     return Judged(offset_hz, is_good)
 
 
