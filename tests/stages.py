@@ -13,6 +13,7 @@ from rxchain.audio.rate_conversion import RateConverter
 from rxchain.audio.squelch import Gate, Squelch
 from rxchain.carrier.fallback import FallbackFollower
 from rxchain.carrier.follower import CarrierFollower, FollowerSettings, make_follower
+from rxchain.carrier.speech_aligner import SpeechAligner
 from rxchain.carrier.track import Follow, Turned
 from rxchain.detectors.coherent import CoherentDetector
 from rxchain.detectors.envelope import EnvelopeDetector, emission_band
@@ -117,6 +118,13 @@ def follower(follow: Follow) -> Callable[[int], Any]:
     return lambda channels: make_follower(FollowerSettings(follow), channels, RATE_HZ)
 
 
+LINES = [one for one in Follow if one is not Follow.SPEECH]
+
+
+def aligner(channels: int) -> SpeechAligner:
+    return SpeechAligner(channels, RATE_HZ, [1] * channels, [(300.0, 2_700.0)] * channels)
+
+
 def fallback(channels: int) -> FallbackFollower:
     return FallbackFollower(
         *(CarrierFollower(FollowerSettings(f), channels, RATE_HZ) for f in (Follow.PILOT, Follow.SQUARE))
@@ -166,7 +174,8 @@ STAGES: dict[str, Entry] = {
         lambda c: OneGroup(OFFSETS_HZ[:c]), wideband, np.complex64, np.complex64,
         ratio=PLAN.base_bins / PLAN.length, alone=lambda k: OneGroup(OFFSETS_HZ[k : k + 1]),
     ),
-    **{f"follower, {one.value}": Entry(follower(one), iq, np.complex64, np.complex64) for one in Follow},
+    **{f"follower, {one.value}": Entry(follower(one), iq, np.complex64, np.complex64) for one in LINES},
+    "speech aligner": Entry(aligner, iq, np.complex64, np.complex64),
     "follower, fallback": Entry(fallback, iq, np.complex64, np.complex64),
 }  # fmt: skip
 

@@ -99,7 +99,7 @@ def make_follower(
 class CarrierFollower:
     """Follows one line a channel.
 
-    settings : what to follow; not :attr:`Follow.NOMINAL`.
+    settings : what to follow; a line, not :attr:`Follow.NOMINAL` or :attr:`Follow.SPEECH`.
     rate_hz : sample rate of the channels.
     sides : for pilots, where each channel's message lies: +1 above the carrier, -1 below, 0 both; default all 0.
 
@@ -115,8 +115,8 @@ class CarrierFollower:
     def __init__(
         self, settings: FollowerSettings, n_channels: int, rate_hz: float, sides: Sequence[int] | None = None
     ) -> None:
-        if settings.follow is Follow.NOMINAL:
-            raise SettingError("follow", "nominal", "there is nothing to follow", "use make_follower")
+        if settings.follow not in RECIPES:
+            raise SettingError("follow", settings.follow.value, "there is no line to follow", "use its own follower")
         sides = tuple(sides) if sides is not None else (0,) * n_channels
         if len(sides) != n_channels:
             raise SettingError("sides", sides, f"one side for each of {n_channels} channels")

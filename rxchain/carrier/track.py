@@ -27,6 +27,7 @@ class Follow(enum.Enum):
     SQUARE = "square"
     FOURTH_POWER = "fourth power"
     NOMINAL = "nominal"
+    SPEECH = "speech"
 
 
 @dataclass(frozen=True, slots=True)

@@ -10,11 +10,12 @@ import numpy as np
 from rxchain.audio.squelch import Squelch
 from rxchain.carrier.fallback import FallbackFollower
 from rxchain.carrier.follower import CarrierFollower, Follower, FollowerSettings, make_follower
+from rxchain.carrier.speech_aligner import SpeechAligner
 from rxchain.carrier.track import Follow, Lock, Turned
 from rxchain.chain.audio_path import AudioPath
 from rxchain.chain.channel_settings import AUTO, OFF, ChannelSettings
 from rxchain.chain.detector_set import DetectorSet
-from rxchain.chain.grouping import GroupKind
+from rxchain.chain.grouping import GroupKind, largest_shift_hz
 from rxchain.detectors.stereo import sum_and_difference
 from rxchain.emissions import Side
 from rxchain.meters.figures import Figures
@@ -37,7 +38,7 @@ class ChannelGroup:
         self.channels = tuple(channels)
         self.rate_hz = plan.rate_hz(kind.bins)
         # A channel turned away from its middle takes the bank's slopes with it.
-        usable_hz = plan.usable_hz(kind.bins) - max(abs(_shift_hz(channel)) for channel in channels)
+        usable_hz = plan.usable_hz(kind.bins) - max(largest_shift_hz(channel) for channel in channels)
         self._follower = _follower(kind, channels, self.rate_hz)
         self._meters = GroupMeters([_metered(channel) for channel in channels], self.rate_hz, usable_hz)
         thresholds_db = [channel.squelch_db for channel in channels]
@@ -160,6 +161,8 @@ class ChannelGroup:
 
 def _follower(kind: GroupKind, channels: Sequence[ChannelSettings], rate_hz: float) -> Follower:
     n, sides = len(channels), [channel.emission.side or 0 for channel in channels]
+    if kind.follow is Follow.SPEECH:
+        return SpeechAligner(n, rate_hz, sides, [channel.audio_hz for channel in channels])
     # Where a pilot may be missing, it is not looked for among the messages.
     search_hz = _PILOT_SHARE * kind.message_hz[0] if kind.pilot_is_optional else FollowerSettings(kind.follow).search_hz
     settings = FollowerSettings(kind.follow, max(search_hz, _LEAST_SEARCH_HZ), kind.live, kind.message_hz)
@@ -180,7 +183,7 @@ def _shift_hz(channel: ChannelSettings) -> float:
 
 def _metered(channel: ChannelSettings) -> MeteredChannel:
     sideband = "both" if channel.sideband == "better" else channel.sideband
-    return MeteredChannel(channel.emission, channel.audio_hz, channel.vestige_hz, sideband)
+    return MeteredChannel(channel.emission, channel.audio_hz, channel.vestige_hz, sideband, channel.aligns_by_speech)
 
 
 def _occupied(channel: ChannelSettings) -> tuple[tuple[float, float], ...]:

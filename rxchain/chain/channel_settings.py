@@ -15,6 +15,7 @@ from rxchain.units import format_frequency, parse_band_hz, parse_frequency_hz
 
 AUTO: Literal["auto"] = "auto"
 OFF: Literal["off"] = "off"
+SPEECH = "speech"
 AutoOrLevel: TypeAlias = "Literal['auto', 'off'] | float"
 
 DETECTORS = (AUTO, "envelope", "rectifier", "coherent")
@@ -29,7 +30,8 @@ _DB = re.compile(r"([+-]?\d+(?:\.\d+)?)\s*dB", re.IGNORECASE)
 class ChannelSettings:
     """One channel, every key decided.
 
-    align_hz : shift of the nominal frequency for an emission with nothing to follow.
+    align_hz : shift of the nominal frequency for an emission with nothing to follow; aligns_by_speech : find it from the
+        voice instead.
     transmit_response : measured gain of a vestigial transmitter: frequencies from the carrier in hertz, positive on the
         side sent whole, and gains; None where a straight slope is assumed.
     agc_db : ``auto``, ``off`` or a fixed gain; squelch_db : ``auto``, ``off`` or the SNR that opens.
@@ -43,6 +45,7 @@ class ChannelSettings:
     sideband: str = "both"
     delay: str = "full"
     align_hz: float = 0.0
+    aligns_by_speech: bool = False
     beat_hz: float = 700.0
     vestige_hz: float = 0.0
     slope: str = "sent"
@@ -103,6 +106,7 @@ def channel_from_table(table: Mapping[str, object], folder: Path = Path()) -> Ch
         sideband=_one_of("sideband", values.get("sideband", "both"), SIDEBANDS),
         delay=_one_of("delay", values.get("delay", "full"), DELAYS),
         align_hz=_align(values.get("align", OFF)),
+        aligns_by_speech=values.get("align") == SPEECH,
         beat_hz=beat_hz,
         vestige_hz=parse_frequency_hz(values["vestige"], "vestige") if "vestige" in values else audio_hz[1] / 4.0,
         slope=slope,
@@ -143,10 +147,10 @@ def _one_of(key: str, value: str, known: tuple[str, ...]) -> str:
 
 
 def _align(value: str) -> float:
-    if value == OFF:
+    if value in (OFF, SPEECH):
         return 0.0
     if value[0] not in "+-":
-        raise SettingError("align", value, "off, or a shift with its sign", "write it like align=+35Hz")
+        raise SettingError("align", value, "off, speech, or a shift with its sign", "write it like align=+35Hz")
     return parse_frequency_hz(value, "align")
 
 

@@ -111,6 +111,10 @@ class DetectorSet:
             case Follow.NOMINAL:
                 shifted = f", shifted by {channel.align_hz:+g} Hz" if channel.align_hz else ""
                 return f"no carrier to follow: {nominal}{shifted}"
+            case Follow.SPEECH if was_locked:
+                return "no carrier sent: turned to where the voice's harmonics line up"
+            case Follow.SPEECH:
+                return f"no carrier sent and no voice to align by: {nominal}"
             case Follow.PILOT if was_locked:
                 return "the message lies beside a carrier: locked to it"
             case Follow.PILOT:

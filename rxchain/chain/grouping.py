@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+from rxchain.carrier.speech_verdict import RANGE_HZ
 from rxchain.carrier.track import Follow
 from rxchain.chain.channel_settings import AUTO, ChannelSettings
 from rxchain.emissions import Reference
@@ -13,6 +14,7 @@ from rxchain.tuning.plan import BankPlan
 # What a channel needs beyond its message's upper edge: the slope of its filters and some mistuning.
 _MARGIN_HZ = 150.0
 _ANY_MESSAGE_HZ = (300.0, 2700.0)  # for followers that do not look at it, so that their groups are not kept apart
+_BLIND_TO_MESSAGE = (Follow.NOMINAL, Follow.CARRIER, Follow.SPEECH)
 _FOLLOW = {
     Reference.CARRIER: Follow.CARRIER,
     Reference.PILOT: Follow.PILOT,
@@ -45,14 +47,14 @@ class GroupKind:
 def kind_of(channel: ChannelSettings, plan: BankPlan) -> GroupKind:
     """The kind of group that a channel belongs in."""
     emission = channel.emission
-    follow = _FOLLOW[emission.reference]
+    follow = Follow.SPEECH if channel.aligns_by_speech else _FOLLOW[emission.reference]
     return GroupKind(
         bins=_bins(channel, plan),
         follow=follow,
         pilot_is_optional=emission.reference in (Reference.PILOT_OR_NOMINAL, Reference.PILOT_OR_FOURTH_POWER),
         fourth_power=emission.reference is Reference.PILOT_OR_FOURTH_POWER,
         live=channel.delay == "live",
-        message_hz=_ANY_MESSAGE_HZ if follow in (Follow.NOMINAL, Follow.CARRIER) else _followed_band(channel),
+        message_hz=_ANY_MESSAGE_HZ if follow in _BLIND_TO_MESSAGE else _followed_band(channel),
         stereo=emission.family == "AM-STEREO",
         n_messages=len(emission.messages),
         candidates=candidates_of(channel),
@@ -80,7 +82,14 @@ def half_width_hz(channel: ChannelSettings) -> float:
         return max(abs(edge_hz - channel.beat_hz) for edge_hz in channel.audio_hz) + 2 * _MARGIN_HZ
     if channel.emission.family == "AM-STEREO":
         return 2.0 * high_hz  # amplitude and phase modulation together: the law spreads beyond the message's band
-    return high_hz + abs(channel.align_hz) + _MARGIN_HZ
+    return high_hz + largest_shift_hz(channel) + _MARGIN_HZ
+
+
+def largest_shift_hz(channel: ChannelSettings) -> float:
+    """How far a channel may be turned from its nominal frequency on purpose."""
+    if channel.emission.family == "A1A":
+        return channel.beat_hz
+    return RANGE_HZ if channel.aligns_by_speech else abs(channel.align_hz)
 
 
 def candidates_of(channel: ChannelSettings) -> tuple[str, ...]:

@@ -11,6 +11,7 @@ from numpy.lib.stride_tricks import sliding_window_view
 from numpy.typing import NDArray
 
 from rxchain.carrier.hops import hop_samples
+from rxchain.carrier.speech_aligner import OFFSET_SIGMA_HZ
 from rxchain.carrier.track import Lock, Track, Turned
 from rxchain.detectors.stereo import sum_and_difference
 from rxchain.emissions import Reference
@@ -67,6 +68,7 @@ class GroupMeters:
         self._needs_phase: Bools = np.array(
             [c.emission.reference is Reference.SQUARE and c.sideband == "both" for c in channels]
         )
+        self._follows_voice: Bools = np.array([channel.follows_voice for channel in channels])
         self._by_lock: Bools = np.array([channel.emission.reference is Reference.CARRIER for channel in channels])
         self._bands = [channel.audio_hz for channel in channels]
         self._windows: Windows[np.complex64] = Windows((n,), self._frame, self._chunk, np.complex64)
@@ -88,6 +90,7 @@ class GroupMeters:
         self._waiting: deque[Tally] = deque()
         self._heard_before = np.full(n, _HANG_CHUNKS + 1)
         self._was_locked: Bools = np.zeros(n, bool)
+        self._voice_hz: Floats = np.full(n, np.nan)  # offset as last found from a voice
         self._recent_carriers: deque[tuple[Floats, Floats, Bools]] = deque(maxlen=RECENT_CHUNKS)
 
     def mark_lost(self, first_sample: int, n_samples: int) -> None:
@@ -149,6 +152,7 @@ class GroupMeters:
         self._carrier.add(phase, power, locked)
         self._recent_carriers.append((phase, power, locked))
         is_locked: Bools = np.asarray(locked.all(axis=1))
+        is_voiced = track.lock[:, -1] == Lock.LOCKED
         amplitude, mean = self._spectra.amplitude(spectra), density.mean(axis=1, dtype=np.float64)
         chunk = Tally(n, self._spectra.n_messages)
         chunk.sidebands = self._spectra.sideband_power(mean)
@@ -161,6 +165,7 @@ class GroupMeters:
             mean = density.mean(axis=1, dtype=np.float64)
         messages, leaked = self._spectra.message_power(spectra, density, mean)
         chunk.leaked = np.where(is_locked, leaked, 0.0)
+        self._voice_hz = np.where(self._follows_voice & is_voiced, track.offset_hz[:, -1], self._voice_hz)
         is_followed: Bools = np.asarray((track.lock != Lock.NONE).all(axis=1))
         self._fill(chunk, valid, upright, messages, power.mean(axis=1), is_locked, is_followed)
         if self._has_depth.any():
@@ -247,6 +252,8 @@ class GroupMeters:
             offset = None
             if self._has_carrier[k] and np.isfinite(offset_hz[k]):
                 offset = Reading(float(offset_hz[k]), float(offset_sigma_hz[k]))
+            if np.isfinite(self._voice_hz[k]):
+                offset = Reading(float(self._voice_hz[k]), OFFSET_SIGMA_HZ)
             figures.append(
                 Figures(
                     snr_db=snr_reading(tally, k, n_messages, width_hz, chunk_s, LEAST_NOISE_SHARE),

@@ -27,13 +27,14 @@ class MeteredChannel:
     """What a meter must know of a channel.
 
     audio_hz : the message's band. vestige_hz : half-width of the vestigial slope. sideband : for double sidebands, which
-    is received: both, upper or lower.
+    is received: both, upper or lower. follows_voice : its offset is what the follower found from the voice.
     """
 
     emission: Emission
     audio_hz: tuple[float, float]
     vestige_hz: float = 0.0
     sideband: str = "both"
+    follows_voice: bool = False
 
 
 class MessageSpectra:

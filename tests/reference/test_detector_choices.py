@@ -103,6 +103,40 @@ def test_a_shift_by_hand_moves_a_single_sideband():
     assert spectrum[0] > 100 * spectrum[1]
 
 
+ALIGNED_HZ = 5.0  # hardly audible in speech, common practice
+ANSWERED_S = 9.0  # by then the voice has been understood
+
+
+@pytest.mark.parametrize(("name", "offset_hz"), [("J3E-USB", -85.0), ("J3E-LSB", 130.0)])
+def test_a_voice_is_turned_to_where_its_harmonics_line_up(shared_recordings, name, offset_hz):
+    voice = Message("sound", path=shared_recordings / "speech" / "woman-30s-8k.wav", start_s=2.0)
+    one = replace(station(name, offset_hz=offset_hz), messages=(voice,), audio_hz=(300.0, 2_700.0))
+    scene = Scene(48_000.0, 1e6, 14.0, (one,), seed=5, noise_dbfs_hz=-85.0)
+    rendered, receiver, audio = receive(scene, "align=speech agc=off squelch=off")
+    assert receiver.figures(0).carrier_offset_hz.value == pytest.approx(offset_hz, abs=ALIGNED_HZ)
+    group, row = receiver.group_of(0)
+    assert group.detector(row)[1] == "no carrier sent: turned to where the voice's harmonics line up"
+    assert 0.0 < group.first_lock_s(row) < ANSWERED_S
+    rate_hz, truth = receiver.audio_rate_hz(0), rendered.truths[0]
+    after = slice(int((ANSWERED_S + 1.0) * rate_hz), None)
+    message = resampled(truth.messages[0], truth.message_rate_hz, audio[0].shape[1], rate_hz)
+    line = np.abs(np.fft.fft(hilbert(audio[0][0])[after] * np.conj(hilbert(message)[after])))
+    assert abs(np.fft.fftfreq(len(line), 1.0 / rate_hz)[np.argmax(line)]) < ALIGNED_HZ
+
+
+def test_noise_and_tones_are_no_voice_to_align_by():
+    stations = tuple(
+        replace(station("J3E-USB", 1e6 + at_hz, kind="tone", offset_hz=40.0), level_dbfs=level_dbfs, name=name)
+        for name, at_hz, level_dbfs in (("noise", -10_000.0, -199.0), ("tone", 10_000.0, -30.0))
+    )
+    _, receiver, _ = receive(Scene(48_000.0, 1e6, 10.0, stations, seed=6, noise_dbfs_hz=-90.0), "align=speech")
+    for place in range(2):
+        group, row = receiver.group_of(place)
+        assert receiver.figures(place).carrier_offset_hz is None
+        assert group.locked_fraction(row) == 0.0
+        assert "no voice to align by" in group.detector(row)[1]
+
+
 def test_noise_alone_is_never_a_carrier():
     """Every kind of follower on noise: no lock is claimed, no offset is made up."""
     names = ("A3E", "R3E-USB", "DSB-SC", "QAM", "VSB-SC-USB")
