@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import argparse
 
+from rxchain.cli.source_options import add_source_arguments, given_options
+
 _EXAMPLES = """\
 examples:
   rxchain receive coast.sigmf-meta --channel "7.1MHz J3E-LSB name=net" --out heard
@@ -32,18 +34,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--pace", choices=("live", "fast"), default="fast", help="recordings at their own pace, or as fast as it goes"
     )
     parser.add_argument("--quiet", action="store_true", help="show nothing while receiving")
-    parser.add_argument("--rate", metavar="FREQUENCY", help="samples a second, of a raw file or the receiver")
-    parser.add_argument(
-        "--centre", metavar="FREQUENCY", help="frequency at the middle, of a file that doesn't say, or to tune to"
-    )
-    parser.add_argument(
-        "--capture", metavar="N", help="which capture of a recording whose captures lie at different frequencies"
-    )
-    parser.add_argument("--gain", metavar="DB", help="receiver's gain in dB; auto (its own) if left out")
-    parser.add_argument("--ppm", metavar="N", help="receiver's frequency correction, parts per million")
-    parser.add_argument(
-        "--direct-sampling", choices=("i", "q"), metavar="i|q", help="receiver's input that bypasses the tuner"
-    )
+    add_source_arguments(parser)
 
 
 def run(arguments: argparse.Namespace) -> int:
@@ -55,11 +46,7 @@ def run(arguments: argparse.Namespace) -> int:
     from rxchain.cli.reception import Request, receive
 
     channels = tuple(channel_from_text(text) for text in arguments.channel)
-    options = {
-        key: value
-        for key in ("rate", "centre", "capture", "gain", "ppm", "direct_sampling")
-        if (value := getattr(arguments, key)) is not None
-    }
+    options = given_options(vars(arguments))
     source = arguments.source
     if source.lower().endswith(".toml"):
         station = load_station(Path(source))

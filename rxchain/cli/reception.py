@@ -24,12 +24,12 @@ from rxchain.chain.receiver import Receiver
 from rxchain.chain.runner import Runner, span_text
 from rxchain.chain.station import check_names
 from rxchain.cli.main import one_line
+from rxchain.cli.source_options import parsed_options
 from rxchain.dashboard.display import Display, make_display
 from rxchain.errors import FaultError, SettingError
 from rxchain.sinks.audio_folder import AudioFolder, NoAudio
 from rxchain.sources.opening import open_source
 from rxchain.sources.pacing import Paced
-from rxchain.units import parse_frequency_hz
 
 
 @dataclass(frozen=True, slots=True)
@@ -58,7 +58,7 @@ def receive(request: Request) -> Result:
         raise SettingError("channel", "(none)", "there is nothing to receive", "add --channel 'FREQUENCY EMISSION'")
     check_names(request.channels)
     _lift_allocation_threshold()
-    source = open_source(request.source, **_source_options(request.options))
+    source = open_source(request.source, **parsed_options(request.options))
     is_live = source.info.n_samples is None
     stop = threading.Event()
     if request.live_pace and not is_live:
@@ -90,28 +90,6 @@ def receive(request: Request) -> Result:
         print(f"rxchain: {one_line(str(fault))}; {span_text(receiver)}, and that is kept", file=sys.stderr)
         return Result(receiver, fault.exit_status)
     return Result(receiver, 130 if outcome.stopped else 0)
-
-
-def _source_options(options: dict[str, str]) -> dict[str, Any]:
-    """The source's keys as numbers."""
-    parsed: dict[str, Any] = {}
-    for key in ("rate", "centre"):
-        if key in options:
-            parsed[f"{key}_hz"] = parse_frequency_hz(options[key], key)
-    for key in ("capture", "ppm"):
-        if key in options:
-            try:
-                parsed[key] = int(options[key])
-            except ValueError:
-                raise SettingError(key, options[key], "must be a whole number") from None
-    if options.get("gain", "auto") != "auto":
-        try:
-            parsed["gain_db"] = float(options["gain"].removesuffix("dB"))
-        except ValueError:
-            raise SettingError("gain", options["gain"], "must be auto or a number of dB") from None
-    if "direct_sampling" in options:
-        parsed["direct_sampling"] = options["direct_sampling"]
-    return parsed
 
 
 @contextmanager

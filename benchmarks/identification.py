@@ -1,0 +1,127 @@
+"""How often emissions are named right: voices and music that took no part in learning, in noise, fading and worse.
+
+Run: ``python benchmarks/identification.py [--quick] > benchmarks/results/identification.md``. The SNR is that of the whole
+emission over the noise in its own bandwidth (a full carrier's sidebands lie 5 to 25 dB below it). A window counts as right
+when family and side are. Paths: Recommendation ITU-R F.1487, mid-latitude.
+"""
+
+from __future__ import annotations
+
+import argparse
+import os
+import time
+from itertools import pairwise
+from pathlib import Path
+
+os.environ["OPENBLAS_NUM_THREADS"] = "1"
+
+import numpy as np
+
+from rxchain.identify.evidence import TEMPLATES, evidence_table
+from rxchain.identify.learning.material import Material
+from rxchain.identify.learning.windows import Conditions, draw_window
+from rxchain.identify.measurements import Measured, measure
+from rxchain.identify.naming import CANT_TELL, FOREIGN, NOISE_ONLY, SURE, Guess, name_all
+from rxchain.identify.short_time import RATE_HZ
+from rxchain.identify.window import prepare_window
+from rxchain.synthesis.propagation import F1487, Fading
+
+SPEECH = Path(__file__).resolve().parents[2] / "shared" / "recordings" / "speech"
+SNRS_DB = (30.0, 20.0, 15.0, 10.0, 5.0)
+SECONDS = (1.0, 3.0, 5.0)
+PATHS = {
+    "clean": None,
+    **{name: Fading(2, *F1487[f"mid-latitude {name}"]) for name in ("moderate", "disturbed")},
+}
+BINS = (0.0, 0.5, 0.7, 0.8, 0.9, 0.97, 1.0001)
+
+
+def expected(template: str, side: int) -> str:
+    family = template.split("/")[0]
+    words = {"NOISE": NOISE_ONLY, "OTHER": FOREIGN}
+    return words.get(family, family + {1: "-USB", -1: "-LSB", 0: ""}[side])
+
+
+def guess(window: np.ndarray, seconds: float, reach_hz: float) -> Guess:
+    prepared = prepare_window(window[: round(seconds * RATE_HZ)], RATE_HZ, reach_hz)
+    return name_all(measure(prepared.iq[None]))[0]
+
+
+def main() -> None:
+    parser = argparse.ArgumentParser()
+    parser.add_argument("--quick", action="store_true")
+    parser.add_argument("--runs", type=int, default=8)
+    parser.add_argument("--reach", type=float, default=500.0)
+    arguments = parser.parse_args()
+    runs = 1 if arguments.quick else arguments.runs
+    material = Material(sorted(SPEECH.glob("*.wav")) + sorted(SPEECH.glob("*.flac")))
+    table = evidence_table()
+    assert table.weights.shape[1] == len(TEMPLATES)
+    rng = np.random.default_rng(20)
+    outcomes: list[tuple[str, float, float, str, str, float]] = []  # path, snr, seconds, true, said, confidence
+    for path, fading in PATHS.items():
+        for snr_db in SNRS_DB:
+            for template in TEMPLATES:
+                for _ in range(runs):
+                    conditions = Conditions(snr_db, fading, rng.uniform(-100.0, 100.0))
+                    window, side = draw_window(template, 5.0, conditions, material.plain, rng)
+                    for seconds in SECONDS:
+                        one = guess(window, seconds, arguments.reach)
+                        outcomes.append((path, snr_db, seconds, expected(template, side), one.name, one.confidence))
+    print("# Naming emissions\n")
+    print(f"{len(outcomes)} windows. Right, % (of these not told, wrong with a confidence above {SURE:g}):\n")
+    print("| path | seconds | " + " | ".join(f"{snr:g} dB" for snr in SNRS_DB) + " |")
+    print("|---|---" + "|---" * len(SNRS_DB) + "|")
+    for path in PATHS:
+        for seconds in SECONDS:
+            cells = []
+            for snr_db in SNRS_DB:
+                these = [one for one in outcomes if one[:3] == (path, snr_db, seconds)]
+                cells.append(rates(these))
+            print(f"| {path} | {seconds:g} | " + " | ".join(cells) + " |")
+    print("\n## Confusions, 5 s, all paths\n")
+    for snr_db in SNRS_DB:
+        wrong: dict[tuple[str, str], int] = {}
+        for _, snr, seconds, true, said, _ in outcomes:
+            if snr == snr_db and seconds == 5.0 and said != true:
+                wrong[true, said] = wrong.get((true, said), 0) + 1
+        listed = ", ".join(
+            f"{true} as {said}: {count}" for (true, said), count in sorted(wrong.items(), key=lambda x: -x[1])
+        )
+        print(f"- {snr_db:g} dB: {listed or 'none'}")
+    print("\n## Calibration: stated chance, windows, share right, %\n")
+    print(
+        "| stated | " + " | ".join(f"{seconds:g} s" for seconds in SECONDS) + " |\n|---" + "|---" * len(SECONDS) + "|"
+    )
+    for low, high in pairwise(BINS):
+        cells = []
+        for seconds in SECONDS:
+            these = [one for one in outcomes if one[2] == seconds and low <= one[5] < high and one[4] != CANT_TELL]
+            right = np.mean([one[3] == one[4] for one in these]) if these else np.nan
+            cells.append(f"{len(these)}: {100 * right:.0f}")
+        print(f"| {low:g}-{min(high, 1):g} | " + " | ".join(cells) + " |")
+    print_cost(material)
+
+
+def rates(outcomes: list[tuple[str, float, float, str, str, float]]) -> str:
+    n = len(outcomes)
+    right = sum(one[3] == one[4] for one in outcomes) / n
+    untold = sum(one[4] == CANT_TELL for one in outcomes) / n
+    bold = sum(one[3] != one[4] and one[5] > SURE and one[4] != CANT_TELL for one in outcomes) / n
+    return f"{100 * right:.1f} ({100 * untold:.1f}, {100 * bold:.1f})"
+
+
+def print_cost(material: Material) -> None:
+    rng = np.random.default_rng(3)
+    windows = np.array([draw_window(t, 5.0, Conditions(20.0), material.plain, rng)[0] for t in TEMPLATES[:16]])
+    started = time.process_time()
+    for first in range(0, 16, 4):
+        measured: Measured = measure(
+            np.array([prepare_window(w, RATE_HZ, 500.0).iq for w in windows[first : first + 4]])
+        )
+        name_all(measured)
+    print(f"\nCost: {1e3 * (time.process_time() - started) / 16:.1f} ms of CPU a guess of one channel over 5 s.")
+
+
+if __name__ == "__main__":
+    main()
