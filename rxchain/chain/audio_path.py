@@ -11,6 +11,7 @@ from rxchain.audio.gain_control import GainControl, GainSettings
 from rxchain.audio.rate_conversion import RateConverter
 from rxchain.audio.squelch import Gate
 from rxchain.chain.channel_settings import AUTO, OFF, AutoOrLevel, ChannelSettings
+from rxchain.chain.group_tap import Tap
 from rxchain.streams import Bools, FloatBlock, Floats
 
 _LEVEL_MEMORY_S = 0.3
@@ -34,6 +35,7 @@ class AudioPath:
         rate_hz: float | None = None,
     ) -> None:
         n = len(channels)
+        self._channel_rate_hz = channel_rate_hz
         fixed_db = np.array([fixed_gain_db(channel.agc_db) for channel in channels])
         always = np.array([channel.squelch_db == OFF for channel in channels])
         self.is_automatic: Bools = np.isnan(fixed_db)
@@ -44,7 +46,16 @@ class AudioPath:
             None if self.rate_hz == channel_rate_hz else RateConverter(n, n_messages, channel_rate_hz, self.rate_hz)
         )
         self._power = np.zeros((n, n_messages))
+        self.tap: Tap | None = None
         self.delay_samples = self._gain.delay_samples + (self._converter.delay_samples if self._converter else 0)
+
+    def tap_rows(self, rows: Sequence[int]) -> Tap:
+        """From now on the ungated audio of these rows is kept as well."""
+        n_messages = self._power.shape[1]
+        rates = self._channel_rate_hz, self.rate_hz
+        converter = None if self._converter is None else RateConverter(len(rows), n_messages, *rates)
+        self.tap = Tap(rows, converter)
+        return self.tap
 
     @property
     def gain_db(self) -> Floats:
@@ -58,11 +69,18 @@ class AudioPath:
 
     def process(self, audio: FloatBlock, open_steps: Bools) -> FloatBlock:
         """Delivered audio as far as it is complete."""
-        return self._deliver(self._gate.process(self._gain.process(audio), open_steps))
+        levelled = self._gain.process(audio)
+        if self.tap is not None:
+            self.tap.take(levelled)
+        return self._deliver(self._gate.process(levelled, open_steps))
 
     def flush(self, open_steps: Bools) -> FloatBlock:
         """The tail."""
-        tail = self._deliver(self._gate.process(self._gain.flush(), open_steps))
+        levelled = self._gain.flush()
+        if self.tap is not None:
+            self.tap.take(levelled)
+            self.tap.finish()
+        tail = self._deliver(self._gate.process(levelled, open_steps))
         return tail if self._converter is None else np.concatenate([tail, self._converter.flush()], axis=2)
 
     def _deliver(self, audio: FloatBlock) -> FloatBlock:

@@ -21,9 +21,10 @@ AutoOrLevel: TypeAlias = "Literal['auto', 'off'] | float"
 DETECTORS = (AUTO, "envelope", "rectifier", "coherent")
 SIDEBANDS = ("both", "upper", "lower", "better")
 DELAYS = ("full", "live")
+LOGS = (OFF, "transmissions", "all")
 SLOPES = ("sent", "received")
 _FIRST_TRY = EMISSIONS["A3E"]
-_KEYS_OF_ANY = ("frequency", "emission", "name", "audio", "delay", "agc", "squelch")
+_KEYS_OF_ANY = ("frequency", "emission", "name", "audio", "delay", "agc", "squelch", "log")
 _NAME = re.compile(r"[A-Za-z0-9_][A-Za-z0-9._+-]{0,63}")
 _DB = re.compile(r"([+-]?\d+(?:\.\d+)?)\s*dB", re.IGNORECASE)
 
@@ -36,6 +37,7 @@ class ChannelSettings:
         voice instead.
     transmit_response : measured gain of a vestigial transmitter: frequencies from the carrier in hertz, positive on the
         side sent whole, and gains; None where a straight slope is assumed.
+    log : ``off``, ``transmissions`` or ``all``: what the logbook keeps of the channel.
     emission_given : whether the emission is the user's word; where not, it is a first try, to be identified.
     audio_given : likewise the audio band.
     agc_db : ``auto``, ``off`` or a fixed gain; squelch_db : ``auto``, ``off`` or the SNR that opens.
@@ -56,6 +58,7 @@ class ChannelSettings:
     transmit_response: tuple[tuple[float, ...], tuple[float, ...]] | None = None
     agc_db: AutoOrLevel = AUTO
     squelch_db: AutoOrLevel = AUTO
+    log: str = OFF
     emission_given: bool = True
     audio_given: bool = False
 
@@ -123,6 +126,7 @@ def channel_from_table(table: Mapping[str, object], folder: Path = Path()) -> Ch
         transmit_response=response,
         agc_db=_auto_or_level("agc", values.get("agc", AUTO)),
         squelch_db=_auto_or_level("squelch", values.get("squelch", AUTO)),
+        log=_one_of("log", values.get("log", OFF), LOGS),
         emission_given=emission_given,
         audio_given="audio" in values,
     )
@@ -263,6 +267,11 @@ def _check_beat(value: str, channel: ChannelSettings) -> None:
         raise SettingError("beat", value, "must lie between 100 Hz and 3 kHz")
 
 
+def _check_log(value: str, channel: ChannelSettings) -> None:
+    if value == "transmissions" and channel.squelch_db == OFF:
+        raise SettingError("log", value, "needs a squelch to tell where one begins", "use squelch=auto, or log=all")
+
+
 def _anything(_: str, __: ChannelSettings) -> None:
     """No rule beyond those of its parser."""
 
@@ -284,7 +293,7 @@ _KEYS: dict[str, Callable[[str, ChannelSettings], None]] = {
     "squelch": _anything,
     "notch": _only_off("notch"),
     "blanker": _only_off("blanker"),
-    "log": _only_off("log"),
+    "log": _check_log,
 }
 
 

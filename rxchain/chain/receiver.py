@@ -20,7 +20,7 @@ from rxchain.errors import SettingError
 from rxchain.identify.naming import CANT_TELL
 from rxchain.meters.figures import Figures
 from rxchain.sources.protocol import SourceInfo
-from rxchain.streams import Block, ComplexBlock, FloatBlock, Floats, Reading
+from rxchain.streams import Block, Bools, ComplexBlock, FloatBlock, Floats, Reading
 from rxchain.tuning.channel_bank import ChannelBank
 from rxchain.tuning.plan import plan_bank
 from rxchain.units import format_frequency
@@ -28,6 +28,7 @@ from rxchain.units import format_frequency
 _SILENCE_PIECE = 1 << 18
 _TREND_POINTS = 60
 _SPECTRUM_PARTS = 480
+_MOST_EVENTS = 100_000
 # How long a new group is left to find its carrier and its gain before it is heard.
 _SETTLES_S = 1.0
 _SETTLED_S = {Follow.SQUARE: 2.6, Follow.PILOT: 1.4}
@@ -39,6 +40,18 @@ class ChannelAudio:
 
     place: int
     audio: FloatBlock
+
+
+@dataclass(frozen=True, slots=True)
+class ChannelTap:
+    """What a logbook needs of one channel, following on what came before; see ``TappedGroup``."""
+
+    place: int
+    group: ChannelGroup
+    row: int
+    iq: ComplexBlock
+    steps: Bools
+    audio: FloatBlock | None
 
 
 class _Run:
@@ -75,6 +88,8 @@ class Receiver:
                 self._audio_rates[place] = run.group.audio_rate_hz
         self._auto = self._identifies(channels)
         self.samples = self.samples_lost = self.gaps = self.overloaded = 0
+        self.losses: deque[tuple[float, float]] = deque(maxlen=_MOST_EVENTS)  # seconds: when, how much
+        self.overloads: deque[tuple[float, int]] = deque(maxlen=_MOST_EVENTS)  # when, how many samples
         trends = len(channels)
         self._offsets: list[deque[float]] = [deque(maxlen=_TREND_POINTS) for _ in range(trends)]
         self._snrs: list[deque[float]] = [deque(maxlen=_TREND_POINTS) for _ in range(trends)]
@@ -104,12 +119,15 @@ class Receiver:
             for run in self._runs:
                 run.group.mark_lost(self.elapsed_s, block.samples_lost / rate_hz)
             self.gaps += 1
+            self.losses.append((self.elapsed_s, block.samples_lost / rate_hz))
             left = block.samples_lost
             while left:
                 n = min(left, _SILENCE_PIECE)
                 audio += self._through(np.zeros(n, np.complex64))
                 left -= n
             self.samples_lost += block.samples_lost
+        if block.overloaded:
+            self.overloads.append((self.elapsed_s, block.overloaded))
         self.overloaded += block.overloaded
         self.samples += len(block.iq)
         return audio + self._through(block.iq)
@@ -123,6 +141,19 @@ class Receiver:
             audio += [ChannelAudio(place, piece) for piece in handover.finish()]
         self._handovers.clear()
         return audio
+
+    def take_taps(self) -> list[ChannelTap]:
+        """What the logged channels' groups made since the last time."""
+        taps = []
+        for run in self._runs:
+            tapped = run.group.take_tap()
+            if tapped is None:
+                continue
+            for row, place in enumerate(run.places):
+                if self._at[place] == (run.group, row):
+                    audio = None if tapped.audio is None else tapped.audio[row]
+                    taps.append(ChannelTap(place, run.group, row, tapped.iq[row], tapped.steps[row], audio))
+        return taps
 
     def change(self, place: int, channel: ChannelSettings) -> None:
         """Receives a channel in another way from the next batch on; its audio goes over without a click."""

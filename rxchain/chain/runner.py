@@ -36,6 +36,7 @@ class Runner:
     """Runs a receiver on a source; everything numeric happens in the thread that calls :meth:`run`.
 
     clock : seconds, steadily rising; paces the snapshots. show : takes a snapshot now and then; None: nobody looks.
+    after_block : called in the numeric thread after each block and after the last.
     late_blocks : asks the source's pacing how many blocks came late so far.
     """
 
@@ -47,9 +48,11 @@ class Runner:
         clock: Callable[[], float],
         show: Callable[[ReceiverStatus], None] | None = None,
         late_blocks: Callable[[], int] = lambda: 0,
+        after_block: Callable[[], None] = lambda: None,
     ) -> None:
         self._source, self._receiver, self._sink = source, receiver, sink
         self._clock, self._show, self._late_blocks = clock, show, late_blocks
+        self._after_block = after_block
         self._stop = threading.Event()
         self._started = 0.0
         self._shown = -float("inf")
@@ -65,6 +68,7 @@ class Runner:
         try:
             for block in self._source.blocks():
                 self._deliver(self._receiver.process(block))
+                self._after_block()
                 self._maybe_show()
                 if self._stop.is_set():
                     break
@@ -74,6 +78,7 @@ class Runner:
             self._source.close()
         try:
             self._deliver(self._receiver.flush())
+            self._after_block()
         except FaultError as error:
             fault = fault or error
         self._receiver.measure(overall=True)

@@ -14,6 +14,7 @@ _COMMANDS = {
     "receive": "receive every channel of a recording or a receiver at once",
     "identify": "find the emissions in a capture, name each and say how sure",
     "synthesize": "make a test capture with known truth from a scene file",
+    "log": "list, show, verify, re-receive and export what was logged",
     "demo": "receive the shipped scene, with no hardware",
 }
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import datetime as dt
 import os
 import signal
 import sys
@@ -12,14 +13,14 @@ from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 from types import FrameType
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 # Small matrix products gain nothing from threads, and threads cost the numeric one its quiet.
 os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
 import numpy as np
 
-from rxchain.chain.channel_settings import ChannelSettings
+from rxchain.chain.channel_settings import OFF, ChannelSettings
 from rxchain.chain.receiver import Receiver
 from rxchain.chain.runner import Runner, span_text
 from rxchain.chain.station import check_names
@@ -31,15 +32,22 @@ from rxchain.sinks.audio_folder import AudioFolder, NoAudio
 from rxchain.sources.opening import open_source
 from rxchain.sources.pacing import Paced
 
+if TYPE_CHECKING:
+    from rxchain.logbook.station_log import StationLog
+
 
 @dataclass(frozen=True, slots=True)
 class Request:
-    """What to receive, and what to do with it. ``options`` : the source's further keys, as written."""
+    """What to receive, and what to do with it.
+
+    options : the source's further keys, as written. log : folder of the logbook, None for the usual one.
+    """
 
     source: str
     options: dict[str, str]
     channels: tuple[ChannelSettings, ...]
     out: Path | None
+    log: Path | None
     live_pace: bool
     quiet: bool
 
@@ -57,6 +65,7 @@ def receive(request: Request) -> Result:
     if not request.channels:
         raise SettingError("channel", "(none)", "there is nothing to receive", "add --channel 'FREQUENCY EMISSION'")
     check_names(request.channels)
+    log_folder = _log_folder(request)
     _lift_allocation_threshold()
     source = open_source(request.source, **parsed_options(request.options))
     is_live = source.info.n_samples is None
@@ -66,6 +75,7 @@ def receive(request: Request) -> Result:
     try:
         receiver = Receiver(source.info, request.channels)
         sink = AudioFolder(request.out, receiver) if request.out else NoAudio()
+        log = None if log_folder is None else _station_log(log_folder, receiver)
     except BaseException:
         source.close()
         raise
@@ -73,7 +83,9 @@ def receive(request: Request) -> Result:
         sys.setswitchinterval(1e-4)  # the display must not hold the numeric thread up for 5 ms at a time
     display: Display = make_display(quiet=request.quiet)
     late = (lambda: source.late_blocks) if isinstance(source, Paced) else (lambda: 0)
-    runner = Runner(source, receiver, sink, time.monotonic, display.show if display.wants_status else None, late)
+    after_block = log.after_block if log is not None else lambda: None
+    show = display.show if display.wants_status else None
+    runner = Runner(source, receiver, sink, time.monotonic, show, late, after_block)
 
     def stop_all() -> None:
         stop.set()
@@ -82,6 +94,8 @@ def receive(request: Request) -> Result:
     with _stopped_by_signals(stop_all), display.running(stop_all):
         outcome = runner.run()
     fault = outcome.fault
+    if log is not None:
+        log.close(one_line(str(fault)) if fault else "stopped" if outcome.stopped else "ended")
     try:
         sink.close()
     except FaultError as error:
@@ -90,6 +104,28 @@ def receive(request: Request) -> Result:
         print(f"rxchain: {one_line(str(fault))}; {span_text(receiver)}, and that is kept", file=sys.stderr)
         return Result(receiver, fault.exit_status)
     return Result(receiver, 130 if outcome.stopped else 0)
+
+
+def _log_folder(request: Request) -> Path | None:
+    """Where the logbook goes; None where no channel is logged."""
+    logged = [channel for channel in request.channels if channel.log != OFF]
+    if not logged:
+        if request.log is not None:
+            raise SettingError(
+                "log", request.log, "no channel is logged", "give a channel log=transmissions or log=all"
+            )
+        return None
+    if request.log is not None:
+        return request.log
+    if request.out is None:
+        raise SettingError("log", logged[0].log, "the logbook needs a folder", "add --log DIR or --out DIR")
+    return request.out / "log"
+
+
+def _station_log(folder: Path, receiver: Receiver) -> StationLog:
+    from rxchain.logbook.station_log import StationLog
+
+    return StationLog(folder, receiver, time.monotonic, lambda: dt.datetime.now(dt.UTC))
 
 
 @contextmanager

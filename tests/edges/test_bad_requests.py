@@ -53,7 +53,6 @@ BAD_CHANNELS = {
     "1MHz A3E agc=loud": "auto, off, or a level in dB",
     "1MHz A3E squelch=7": "auto, off, or a level in dB",
     "1MHz A3E notch=auto": "only off is offered",
-    "1MHz A3E log=all": "only off is offered",
     "1MHz A3E colour=red": "not a key of a channel",
     "1MHz A3E name=a name=b": "name is given twice",
     "1MHz A3E rubbish": "is not key=value",
