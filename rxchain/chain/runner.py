@@ -9,7 +9,7 @@ from dataclasses import dataclass
 from typing import Protocol
 
 from rxchain.chain.receiver import ChannelAudio, Receiver
-from rxchain.chain.status import ReceiverStatus
+from rxchain.chain.status import ReceiverStatus, SoundStatus
 from rxchain.errors import FaultError
 from rxchain.sources.protocol import Source
 
@@ -36,7 +36,7 @@ class Runner:
     """Runs a receiver on a source; everything numeric happens in the thread that calls :meth:`run`.
 
     clock : seconds, steadily rising; paces the snapshots. show : takes a snapshot now and then; None: nobody looks.
-    late_blocks : asks the source's pacing how many blocks came late so far.
+    late_blocks : asks the source's pacing how many blocks came late so far. sound : asks how it stands with the sound.
     """
 
     def __init__(
@@ -47,9 +47,11 @@ class Runner:
         clock: Callable[[], float],
         show: Callable[[ReceiverStatus], None] | None = None,
         late_blocks: Callable[[], int] = lambda: 0,
+        sound: Callable[[], SoundStatus | None] = lambda: None,
     ) -> None:
         self._source, self._receiver, self._sink = source, receiver, sink
         self._clock, self._show, self._late_blocks = clock, show, late_blocks
+        self._sound = sound
         self._stop = threading.Event()
         self._started = 0.0
         self._shown = -float("inf")
@@ -100,6 +102,7 @@ class Runner:
             late_blocks=self._late_blocks(),
             spectrum_dbfs=receiver.spectrum_dbfs(),
             channels=tuple(receiver.channel_status(place) for place in range(len(receiver.channels))),
+            sound=self._sound(),
         )
 
     def _deliver(self, audio: list[ChannelAudio]) -> None:

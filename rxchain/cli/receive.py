@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import argparse
 
+from rxchain.cli.listen_options import add_listen_arguments, listen_of
 from rxchain.cli.source_options import add_source_arguments, given_options
 
 _EXAMPLES = """\
 examples:
   rxchain receive coast.sigmf-meta --channel "7.1MHz J3E-LSB name=net" --out heard
   rxchain receive station.toml --out heard
+  rxchain receive station.toml --listen harbour
   rxchain receive band.cu8 --rate 2.4MHz --centre 118.5MHz --channel "118.1MHz A3E"
 
 A channel is FREQUENCY EMISSION [key=value ...]; the keys are those of a [[channel]] table:
@@ -31,9 +33,12 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     )
     parser.add_argument("--out", metavar="DIR", help="folder for audio and summary.json; made if it is not there")
     parser.add_argument(
-        "--pace", choices=("live", "fast"), default="fast", help="recordings at their own pace, or as fast as it goes"
+        "--pace",
+        choices=("live", "fast"),
+        help="recordings at their own pace, or as fast as it goes; fast unless listened to",
     )
     parser.add_argument("--quiet", action="store_true", help="show nothing while receiving")
+    add_listen_arguments(parser)
     add_source_arguments(parser)
 
 
@@ -53,5 +58,7 @@ def run(arguments: argparse.Namespace) -> int:
         source, options = station.source, station.source_options | options
         channels = station.channels + channels
     out = Path(arguments.out) if arguments.out else None
-    request = Request(source, options, channels, out, live_pace=arguments.pace == "live", quiet=arguments.quiet)
+    listen = listen_of(arguments)
+    live_pace = arguments.pace == "live"
+    request = Request(source, options, channels, out, live_pace=live_pace, quiet=arguments.quiet, listen=listen)
     return receive(request).exit_status

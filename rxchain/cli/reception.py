@@ -23,18 +23,23 @@ from rxchain.chain.channel_settings import ChannelSettings
 from rxchain.chain.receiver import Receiver
 from rxchain.chain.runner import Runner, span_text
 from rxchain.chain.station import check_names
+from rxchain.cli.listen_options import Listen, live_where_heard, open_listening
 from rxchain.cli.main import one_line
 from rxchain.cli.source_options import parsed_options
 from rxchain.dashboard.display import Display, make_display
 from rxchain.errors import FaultError, SettingError
 from rxchain.sinks.audio_folder import AudioFolder, NoAudio
+from rxchain.sinks.several import Several
 from rxchain.sources.opening import open_source
 from rxchain.sources.pacing import Paced
 
 
 @dataclass(frozen=True, slots=True)
 class Request:
-    """What to receive, and what to do with it. ``options`` : the source's further keys, as written."""
+    """What to receive, and what to do with it.
+
+    options : the source's further keys, as written. listen : what to hear; it goes at live pace then.
+    """
 
     source: str
     options: dict[str, str]
@@ -42,6 +47,7 @@ class Request:
     out: Path | None
     live_pace: bool
     quiet: bool
+    listen: Listen | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -61,19 +67,32 @@ def receive(request: Request) -> Result:
     source = open_source(request.source, **parsed_options(request.options))
     is_live = source.info.n_samples is None
     stop = threading.Event()
-    if request.live_pace and not is_live:
+    live_pace = request.live_pace or request.listen is not None
+    if live_pace and not is_live:
         source = Paced(source, time.monotonic, lambda seconds: stop.wait(seconds))
+    listening = None
     try:
-        receiver = Receiver(source.info, request.channels)
+        receiver = Receiver(source.info, live_where_heard(request.channels, request.listen))
+        listening = open_listening(request.listen, receiver) if request.listen else None
         sink = AudioFolder(request.out, receiver) if request.out else NoAudio()
     except BaseException:
+        if listening is not None:
+            listening.close()
         source.close()
         raise
-    if is_live or request.live_pace:
+    if is_live or live_pace:
         sys.setswitchinterval(1e-4)  # the display must not hold the numeric thread up for 5 ms at a time
     display: Display = make_display(quiet=request.quiet)
     late = (lambda: source.late_blocks) if isinstance(source, Paced) else (lambda: 0)
-    runner = Runner(source, receiver, sink, time.monotonic, display.show if display.wants_status else None, late)
+    runner = Runner(
+        source,
+        receiver,
+        Several([sink, listening]) if listening else sink,
+        time.monotonic,
+        display.show if display.wants_status else None,
+        late,
+        listening.status if listening else lambda: None,
+    )
 
     def stop_all() -> None:
         stop.set()
@@ -81,6 +100,8 @@ def receive(request: Request) -> Result:
 
     with _stopped_by_signals(stop_all), display.running(stop_all):
         outcome = runner.run()
+        if listening is not None:
+            listening.close()
     fault = outcome.fault
     try:
         sink.close()
