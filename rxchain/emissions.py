@@ -125,4 +125,6 @@ def emission_named(name: str) -> Emission:
     try:
         return EMISSIONS[name.upper()]
     except KeyError:
-        raise SettingError("emission", name, "not an emission known here", "one of " + ", ".join(EMISSIONS)) from None
+        raise SettingError(
+            "emission", name, "not an emission known here", "auto, or one of " + ", ".join(EMISSIONS)
+        ) from None

@@ -20,7 +20,8 @@ class AudioPath:
     """Gain control, squelch gate and rate conversion of a group of channels.
 
     process(audio, open_steps) : float32, (channels, messages, n) and the squelch's decisions. Returns audio at
-        ``rate_hz``; with ``agc=off`` and ``squelch=off`` it is the detected message times exactly 1.
+        ``rate_hz``, by default the channel's own where that is whole; with ``agc=off`` and ``squelch=off`` it is the
+        detected message times exactly 1.
     """
 
     def __init__(
@@ -30,6 +31,7 @@ class AudioPath:
         squelch_step: int,
         channel_rate_hz: float,
         live: bool,
+        rate_hz: float | None = None,
     ) -> None:
         n = len(channels)
         fixed_db = np.array([fixed_gain_db(channel.agc_db) for channel in channels])
@@ -37,7 +39,7 @@ class AudioPath:
         self.is_automatic: Bools = np.isnan(fixed_db)
         self._gain = GainControl(GainSettings(), fixed_db, n_messages, channel_rate_hz, live)
         self._gate = Gate(n, n_messages, squelch_step, channel_rate_hz, always)
-        self.rate_hz = delivered_rate_hz(channel_rate_hz)
+        self.rate_hz = rate_hz or delivered_rate_hz(channel_rate_hz)
         self._converter = (
             None if self.rate_hz == channel_rate_hz else RateConverter(n, n_messages, channel_rate_hz, self.rate_hz)
         )

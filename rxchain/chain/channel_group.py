@@ -30,13 +30,22 @@ class ChannelGroup:
     """A group of channels of one kind, from their I/Q to their audio.
 
     process(iq) : complex64, (channels, n), from the bank. Returns audio, float32, (channels, messages, m), at
-        ``audio_rate_hz``; sample k is the instant k / rate after the stream's first sample.
+        ``audio_rate_hz``; sample k is the instant k / rate after the group's first sample.
+    first_index : of the group's first sample in its channels' stream: not 0 for a group that begins within a run.
     """
 
-    def __init__(self, kind: GroupKind, channels: Sequence[ChannelSettings], plan: BankPlan) -> None:
+    def __init__(
+        self,
+        kind: GroupKind,
+        channels: Sequence[ChannelSettings],
+        plan: BankPlan,
+        first_index: int = 0,
+        audio_rate_hz: float | None = None,
+    ) -> None:
         self.kind = kind
         self.channels = tuple(channels)
         self.rate_hz = plan.rate_hz(kind.bins)
+        self.first_index = first_index
         # A channel turned away from its middle takes the bank's slopes with it.
         usable_hz = plan.usable_hz(kind.bins) - max(largest_shift_hz(channel) for channel in channels)
         self._follower = _follower(kind, channels, self.rate_hz)
@@ -49,7 +58,9 @@ class ChannelGroup:
             np.array([np.nan if db in (AUTO, OFF) else float(db) for db in thresholds_db]),
         )
         self._detectors = DetectorSet(kind, channels, self.rate_hz, usable_hz)
-        self._audio = AudioPath(channels, kind.n_messages, self._squelch.step_samples, self.rate_hz, kind.live)
+        self._audio = AudioPath(
+            channels, kind.n_messages, self._squelch.step_samples, self.rate_hz, kind.live, audio_rate_hz
+        )
         self.audio_rate_hz = self._audio.rate_hz
         n = len(channels)
         self._locked_hops = np.zeros(n, np.int64)
@@ -81,7 +92,7 @@ class ChannelGroup:
 
     def mark_lost(self, first_s: float, duration_s: float) -> None:
         """A stretch of the stream was lost: its samples are zeros and count in no figure."""
-        first = int(np.floor(first_s * self.rate_hz))
+        first = int(np.floor(first_s * self.rate_hz)) - self.first_index
         self._meters.mark_lost(first, int(np.ceil(duration_s * self.rate_hz)) + 1)
 
     def recent_figures(self) -> list[Figures]:
@@ -125,7 +136,7 @@ class ChannelGroup:
         """When a channel's carrier was first followed, seconds from the start; None if never."""
         if self._first_lock_hop[row] < 0:
             return None
-        return float(self._first_lock_hop[row] * self._hop_samples / self.rate_hz)
+        return float((self.first_index + self._first_lock_hop[row] * self._hop_samples) / self.rate_hz)
 
     def detector(self, row: int) -> tuple[str, str]:
         """The detector that serves a channel, and why."""

@@ -4,12 +4,12 @@ from __future__ import annotations
 
 import re
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import pairwise
 from pathlib import Path
 from typing import Literal, TypeAlias
 
-from rxchain.emissions import Emission, emission_named
+from rxchain.emissions import EMISSIONS, Emission, emission_named
 from rxchain.errors import SettingError
 from rxchain.units import format_frequency, parse_band_hz, parse_frequency_hz
 
@@ -22,6 +22,8 @@ DETECTORS = (AUTO, "envelope", "rectifier", "coherent")
 SIDEBANDS = ("both", "upper", "lower", "better")
 DELAYS = ("full", "live")
 SLOPES = ("sent", "received")
+_FIRST_TRY = EMISSIONS["A3E"]
+_KEYS_OF_ANY = ("frequency", "emission", "name", "audio", "delay", "agc", "squelch")
 _NAME = re.compile(r"[A-Za-z0-9_][A-Za-z0-9._+-]{0,63}")
 _DB = re.compile(r"([+-]?\d+(?:\.\d+)?)\s*dB", re.IGNORECASE)
 
@@ -35,6 +37,8 @@ class ChannelSettings:
     transmit_response : measured gain of a vestigial transmitter: frequencies from the carrier in hertz, positive on the
         side sent whole, and gains; None where a straight slope is assumed.
     delay : ``auto`` is ``live`` for a channel that is heard and ``full`` for others.
+    emission_given : whether the emission is the user's word; where not, it is a first try, to be identified.
+    audio_given : likewise the audio band.
     agc_db : ``auto``, ``off`` or a fixed gain; squelch_db : ``auto``, ``off`` or the SNR that opens.
     """
 
@@ -53,6 +57,8 @@ class ChannelSettings:
     transmit_response: tuple[tuple[float, ...], tuple[float, ...]] | None = None
     agc_db: AutoOrLevel = AUTO
     squelch_db: AutoOrLevel = AUTO
+    emission_given: bool = True
+    audio_given: bool = False
 
 
 def channel_from_text(text: str) -> ChannelSettings:
@@ -94,12 +100,16 @@ def channel_from_table(table: Mapping[str, object], folder: Path = Path()) -> Ch
         if needed not in values:
             raise SettingError("channel", dict(table), f"{needed} is missing")
     frequency_hz = parse_frequency_hz(values["frequency"])
-    emission = emission_named(values["emission"])
+    emission_given = values["emission"] != AUTO
+    emission = emission_named(values["emission"]) if emission_given else _FIRST_TRY
     beat_hz = parse_frequency_hz(values.get("beat", "700Hz"), "beat")
     audio_hz = _audio(values, emission, beat_hz)
     slope, response = _slope(values.get("slope", SLOPES[0]), values.get("transmit_response"), folder)
     channel = ChannelSettings(
-        name=_name(values.get("name") or f"{format_frequency(frequency_hz)}-{emission.name}"),
+        name=_name(
+            values.get("name")
+            or f"{format_frequency(frequency_hz)}-{values['emission'] if not emission_given else emission.name}"
+        ),
         frequency_hz=frequency_hz,
         emission=emission,
         audio_hz=audio_hz,
@@ -114,10 +124,19 @@ def channel_from_table(table: Mapping[str, object], folder: Path = Path()) -> Ch
         transmit_response=response,
         agc_db=_auto_or_level("agc", values.get("agc", AUTO)),
         squelch_db=_auto_or_level("squelch", values.get("squelch", AUTO)),
+        emission_given=emission_given,
+        audio_given="audio" in values,
     )
     for key, value in values.items():
         _check_use(key, value, channel)
     return channel
+
+
+def as_emission(channel: ChannelSettings, emission: Emission) -> ChannelSettings:
+    """The same channel for another emission: what was not given follows from the emission."""
+    keeps_band = channel.audio_given and emission.family != "A1A"
+    audio_hz = channel.audio_hz if keeps_band else _default_audio(emission, channel.beat_hz)
+    return replace(channel, emission=emission, audio_hz=audio_hz, vestige_hz=audio_hz[1] / 4.0)
 
 
 def _audio(values: Mapping[str, str], emission: Emission, beat_hz: float) -> tuple[float, float]:
@@ -126,6 +145,10 @@ def _audio(values: Mapping[str, str], emission: Emission, beat_hz: float) -> tup
         if low_hz < 20.0:
             raise SettingError("audio", values["audio"], "the lower edge must be at least 20 Hz")
         return low_hz, high_hz
+    return _default_audio(emission, beat_hz)
+
+
+def _default_audio(emission: Emission, beat_hz: float) -> tuple[float, float]:
     if emission.family == "A1A":
         return max(50.0, beat_hz - 250.0), beat_hz + 250.0
     return emission.audio_hz
@@ -267,4 +290,8 @@ _KEYS: dict[str, Callable[[str, ChannelSettings], None]] = {
 
 
 def _check_use(key: str, value: str, channel: ChannelSettings) -> None:
+    if not channel.emission_given and key not in _KEYS_OF_ANY and value not in (AUTO, OFF):
+        raise SettingError(
+            key, value, "with emission=auto it follows from what is found", "leave it out, or name the emission"
+        )
     _KEYS[key](value, channel)

@@ -3,18 +3,24 @@
 from __future__ import annotations
 
 from collections import deque
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
+from rxchain.carrier.track import Follow
+from rxchain.chain.auto_channels import AutoChannels
 from rxchain.chain.channel_group import ChannelGroup
-from rxchain.chain.channel_settings import ChannelSettings
+from rxchain.chain.channel_settings import ChannelSettings, as_emission
 from rxchain.chain.grouping import grouped
+from rxchain.chain.handover import FADE_S, Handover
 from rxchain.chain.status import ChannelStatus
+from rxchain.emissions import Emission
 from rxchain.errors import SettingError
+from rxchain.identify.naming import CANT_TELL
 from rxchain.meters.figures import Figures
 from rxchain.sources.protocol import SourceInfo
-from rxchain.streams import Block, FloatBlock, Floats, Reading
+from rxchain.streams import Block, ComplexBlock, FloatBlock, Floats, Reading
 from rxchain.tuning.channel_bank import ChannelBank
 from rxchain.tuning.plan import plan_bank
 from rxchain.units import format_frequency
@@ -22,6 +28,9 @@ from rxchain.units import format_frequency
 _SILENCE_PIECE = 1 << 18
 _TREND_POINTS = 60
 _SPECTRUM_PARTS = 480
+# How long a new group is left to find its carrier and its gain before it is heard.
+_SETTLES_S = 1.0
+_SETTLED_S = {Follow.SQUARE: 2.6, Follow.PILOT: 1.4}
 
 
 @dataclass(frozen=True, slots=True)
@@ -32,34 +41,40 @@ class ChannelAudio:
     audio: FloatBlock
 
 
+class _Run:
+    """A group at work: which places of the run its rows are."""
+
+    def __init__(self, group: ChannelGroup, places: list[int]) -> None:
+        self.group, self.places = group, places
+        self.in_use = set(places)
+
+
 class Receiver:
     """Receives every channel of a stream.
 
     process(block) : the next block of the stream; returns the audio that has become complete, by channel.
     Lost samples are bridged by silence of the same length, so that audio stays on the clock; figures leave them out.
+    A channel whose emission is not given is identified on the way, and received as what it is found to be.
     """
 
     def __init__(self, info: SourceInfo, channels: tuple[ChannelSettings, ...]) -> None:
         self.info = info
-        self.channels = channels
-        plan = plan_bank(info.sample_rate_hz)
+        self.channels = list(channels)
+        self._plan = plan_bank(info.sample_rate_hz)
         for channel in channels:
             _check_inside(channel, info)
-        members = grouped(channels, plan)
-        self._places = [[place for place, _ in group] for group in members.values()]
-        self._groups = [ChannelGroup(kind, [channel for _, channel in group], plan) for kind, group in members.items()]
-        offsets_hz = [
-            np.array([channel.frequency_hz - info.centre_hz for channel in group.channels]) for group in self._groups
-        ]
-        bins = [group.kind.bins for group in self._groups]
-        self._bank = ChannelBank(plan, list(zip(bins, offsets_hz, strict=True)))
-        self._at = {
-            place: (group, row)
-            for group, places in zip(self._groups, self._places, strict=True)
-            for row, place in enumerate(places)
-        }
+        self._bank = ChannelBank(self._plan, [])
+        self._runs: list[_Run] = []
+        self._at: dict[int, tuple[ChannelGroup, int]] = {}
+        self._handovers: dict[int, tuple[Handover, _Run, _Run]] = {}
+        self._audio_rates: dict[int, float] = {}
+        self._audio_samples = [0] * len(channels)
+        for run in self._start(dict(enumerate(channels))):
+            for row, place in enumerate(run.places):
+                self._at[place] = run.group, row
+                self._audio_rates[place] = run.group.audio_rate_hz
+        self._auto = self._identifies(channels)
         self.samples = self.samples_lost = self.gaps = self.overloaded = 0
-        self._next_index: int | None = None
         trends = len(channels)
         self._offsets: list[deque[float]] = [deque(maxlen=_TREND_POINTS) for _ in range(trends)]
         self._snrs: list[deque[float]] = [deque(maxlen=_TREND_POINTS) for _ in range(trends)]
@@ -78,33 +93,41 @@ class Receiver:
         return self.overloaded / self.samples if self.samples else 0.0
 
     def audio_rate_hz(self, place: int) -> float:
-        """Sample rate of a channel's audio."""
-        return self._at[place][0].audio_rate_hz
+        """Sample rate of a channel's audio; it stays whatever the channel turns out to be."""
+        return self._audio_rates[place]
 
     def process(self, block: Block) -> list[ChannelAudio]:
         """The audio that this block completes."""
         audio: list[ChannelAudio] = []
         if block.samples_lost:
             rate_hz = self.info.sample_rate_hz
-            for group in self._groups:
-                group.mark_lost(self.elapsed_s, block.samples_lost / rate_hz)
+            for run in self._runs:
+                run.group.mark_lost(self.elapsed_s, block.samples_lost / rate_hz)
             self.gaps += 1
             left = block.samples_lost
             while left:
                 n = min(left, _SILENCE_PIECE)
-                audio += self._through(self._bank.process(np.zeros(n, np.complex64)))
+                audio += self._through(np.zeros(n, np.complex64))
                 left -= n
             self.samples_lost += block.samples_lost
         self.overloaded += block.overloaded
         self.samples += len(block.iq)
-        return audio + self._through(self._bank.process(block.iq))
+        return audio + self._through(block.iq)
 
     def flush(self) -> list[ChannelAudio]:
         """The last of every channel's audio; each is as long as the stream."""
-        audio = self._through(self._bank.flush())
-        for group, places in zip(self._groups, self._places, strict=True):
-            audio += _by_channel(places, group.flush())
+        audio = self._delivered(self._bank.flush())
+        for run in list(self._runs):
+            audio += self._from_run(run, run.group.flush())
+        for place, (handover, _, _) in self._handovers.items():
+            audio += [ChannelAudio(place, piece) for piece in handover.finish()]
+        self._handovers.clear()
         return audio
+
+    def change(self, place: int, channel: ChannelSettings) -> None:
+        """Receives a channel in another way from the next batch on; its audio goes over without a click."""
+        _check_inside(channel, self.info)
+        self._change_all({place: channel})
 
     def figures(self, place: int) -> Figures:
         """A channel's figures since the start, as of the last :meth:`measure` with ``overall``."""
@@ -112,10 +135,13 @@ class Receiver:
 
     def measure(self, overall: bool) -> None:
         """Brings the figures up to date: the recent ones, and those since the start where asked for."""
-        for group, places in zip(self._groups, self._places, strict=True):
-            self._recent.update(zip(places, group.recent_figures(), strict=True))
+        for run in self._runs:
+            current = [row for row, place in enumerate(run.places) if self._at[place] == (run.group, row)]
+            lately = run.group.recent_figures()
+            self._recent.update((run.places[row], lately[row]) for row in current)
             if overall:
-                self._overall.update(zip(places, group.overall_figures(), strict=True))
+                figures = run.group.overall_figures()
+                self._overall.update((run.places[row], figures[row]) for row in current)
         if self.elapsed_s >= self._trend_s:
             self._trend_s = self.elapsed_s + 1.0
             for place in range(len(self.channels)):
@@ -136,18 +162,20 @@ class Receiver:
         channel = self.channels[place]
         group, row = self._at[place]
         detector, reason = group.detector(row)
+        emission, given, confidence = self.identified(place)
+        received = group.channels[row]  # which may still be on its way to another group
         return ChannelStatus(
             name=channel.name,
             frequency_hz=channel.frequency_hz,
-            emission=channel.emission.name,
-            emission_given=True,
-            emission_confidence=1.0,
+            emission=emission,
+            emission_given=given,
+            emission_confidence=confidence,
             detector=detector,
             detector_reason=reason,
             lock=group.lock_words()[row],
             open=bool(group.is_open[row]),
-            messages=messages_of(channel),
-            audio_hz=channel.audio_hz,
+            messages=messages_of(received),
+            audio_hz=received.audio_hz,
             audio_dbfs=tuple(float(level) for level in group.audio_dbfs[row]),
             gain_db=group.gain_db[row],
             recent=self._recent.get(place, Figures()),
@@ -156,12 +184,122 @@ class Receiver:
             snr_trend_db=np.array(self._snrs[place], dtype=np.float64),
         )
 
-    def _through(self, blocks: list[np.ndarray]) -> list[ChannelAudio]:
+    def identified(self, place: int) -> tuple[str, bool, float]:
+        """Name of a channel's emission, whether it was given, and how sure it is; or what is there in place of one."""
+        channel = self.channels[place]
+        if channel.emission_given:
+            return channel.emission.name, True, 1.0
+        guess = self._auto.guesses.get(place) if self._auto else None
+        if guess is None:
+            return CANT_TELL, False, 0.0
+        return guess.name, False, guess.confidence
+
+    def _identifies(self, channels: tuple[ChannelSettings, ...]) -> AutoChannels | None:
+        places = [place for place, channel in enumerate(channels) if not channel.emission_given]
+        if not places:
+            return None
+        auto = AutoChannels(places, [channels[place] for place in places], self._plan)
+        self._bank.add(auto.bins, self._offsets_hz([channels[place] for place in places]))
+        return auto
+
+    def _offsets_hz(self, channels: Sequence[ChannelSettings]) -> Floats:
+        return np.array([channel.frequency_hz - self.info.centre_hz for channel in channels])
+
+    def _start(self, wanted: dict[int, ChannelSettings]) -> list[_Run]:
+        """Groups for these places, at work from the next batch on."""
+        started = []
+        channels = tuple(wanted.values())
+        places = list(wanted)
+        # All audio of a group has one rate; what a channel began with it keeps.
+        for rate_hz in dict.fromkeys(self._audio_rates.get(place) for place in places):
+            some = [k for k, place in enumerate(places) if self._audio_rates.get(place) == rate_hz]
+            members = grouped(tuple(channels[k] for k in some), self._plan)
+            for kind, group_members in members.items():
+                group_channels = [channel for _, channel in group_members]
+                first = self._bank.add(kind.bins, self._offsets_hz(group_channels), before=len(self._runs))
+                group = ChannelGroup(kind, group_channels, self._plan, first, rate_hz)
+                run = _Run(group, [places[some[k]] for k, _ in group_members])
+                self._runs.append(run)
+                started.append(run)
+        return started
+
+    def _change_all(self, wanted: dict[int, ChannelSettings]) -> None:
+        """Each channel's audio is taken from its new group once that has settled; a change on the way ends at once."""
+        wanted = {place: channel for place, channel in wanted.items() if place not in self._handovers}
+        old_runs = {place: self._run_of(place) for place in wanted}
+        for run in self._start(wanted):
+            group, rate_hz = run.group, run.group.audio_rate_hz
+            first = round(group.first_index * rate_hz / group.rate_hz)
+            settled = first + round(_SETTLED_S.get(group.kind.follow, _SETTLES_S) * rate_hz)
+            for place in run.places:
+                handover = Handover(self._audio_samples[place], first, settled, round(FADE_S * rate_hz))
+                self._handovers[place] = handover, old_runs[place], run
+        for place, channel in wanted.items():
+            self.channels[place] = channel
+
+    def _run_of(self, place: int) -> _Run:
+        group = self._at[place][0]
+        return next(run for run in self._runs if run.group is group)
+
+    def _through(self, iq: ComplexBlock) -> list[ChannelAudio]:
+        if self._auto is None:
+            return self._delivered(self._bank.process(iq))
+        # What is identified takes effect at the next batch, whatever the blocks are.
         audio: list[ChannelAudio] = []
-        for group, places, iq in zip(self._groups, self._places, blocks, strict=True):
-            if iq.shape[1]:
-                audio += _by_channel(places, group.process(iq))
+        while len(iq):
+            n = min(len(iq), self._bank.until_batch)
+            audio += self._delivered(self._bank.process(iq[:n]))
+            iq = iq[n:]
         return audio
+
+    def _delivered(self, blocks: list[ComplexBlock]) -> list[ChannelAudio]:
+        audio: list[ChannelAudio] = []
+        for run, iq in zip(list(self._runs), blocks, strict=False):
+            if iq.shape[1]:
+                audio += self._from_run(run, run.group.process(iq))
+        if self._auto is not None and len(blocks) and blocks[-1].shape[1]:
+            self._take_up(self._auto.process(blocks[-1]))
+        self._drop_idle()
+        return audio
+
+    def _take_up(self, known: list[tuple[int, Emission]]) -> None:
+        changed = {
+            place: as_emission(self.channels[place], emission)
+            for place, emission in known
+            if emission is not self.channels[place].emission
+        }
+        if changed:
+            self._change_all(changed)
+
+    def _from_run(self, run: _Run, audio: FloatBlock) -> list[ChannelAudio]:
+        """What of a group's new audio, (channels, messages, n), can be delivered."""
+        made = []
+        for row, place in enumerate(run.places):
+            if place in self._handovers:
+                handover, old, new = self._handovers[place]
+                pieces = (
+                    handover.from_old(audio[row]) if run is old else handover.from_new(audio[row]) if run is new else []
+                )
+                if handover.is_over:
+                    del self._handovers[place]
+                    old.in_use.discard(place)
+                    self._at[place] = new.group, new.places.index(place)
+            elif self._at[place] == (run.group, row):
+                pieces = [audio[row]]
+            else:
+                continue
+            for piece in pieces:
+                if piece.shape[1]:
+                    self._audio_samples[place] += piece.shape[1]
+                    made.append(ChannelAudio(place, piece))
+        return made
+
+    def _drop_idle(self) -> None:
+        """Groups that all their channels have left are worked on no longer."""
+        for k in reversed(range(len(self._runs))):
+            if not self._runs[k].in_use:
+                del self._runs[k]
+                self._bank.drop(k)
 
 
 def messages_of(channel: ChannelSettings) -> tuple[str, ...]:
@@ -169,10 +307,6 @@ def messages_of(channel: ChannelSettings) -> tuple[str, ...]:
     if channel.emission.is_double_sideband and channel.sideband != "both":
         return (channel.sideband,)
     return channel.emission.messages
-
-
-def _by_channel(places: list[int], audio: FloatBlock) -> list[ChannelAudio]:
-    return [ChannelAudio(place, one) for place, one in zip(places, audio, strict=True)] if audio.shape[2] else []
 
 
 def _check_inside(channel: ChannelSettings, info: SourceInfo) -> None:

@@ -14,7 +14,8 @@ examples:
   rxchain receive station.toml --listen harbour
   rxchain receive band.cu8 --rate 2.4MHz --centre 118.5MHz --channel "118.1MHz A3E"
 
-A channel is FREQUENCY EMISSION [key=value ...]; the keys are those of a [[channel]] table:
+A channel is FREQUENCY EMISSION [key=value ...], with auto for an EMISSION that is to be found out; the keys are those of
+a [[channel]] table:
 name, audio, detector, sideband, delay, align, beat, vestige, slope, transmit_response, agc, squelch."""
 
 

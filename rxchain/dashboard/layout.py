@@ -110,6 +110,9 @@ def channel_table(channels: tuple[ChannelStatus, ...], selected: int, width: int
     return table
 
 
+_SURE = 0.9
+
+
 def detail_strip(channel: ChannelStatus, width: int, glyphs: Glyphs) -> Group:
     """All there is to say of one channel over the last seconds, six lines."""
     best = channel.recent
@@ -147,7 +150,8 @@ def _row(channel: ChannelStatus, width: int, glyphs: Glyphs) -> list[Text]:
     cells = [Text(clean(channel.name))]
     if medium:
         cells.append(Text(frequency(channel.frequency_hz)))
-    cells.append(Text(channel.emission))
+    unsure = not channel.emission_given and channel.emission_confidence < _SURE
+    cells.append(Text(channel.emission + "?" * unsure))
     cells.append(Text(channel.detector if wide else channel.detector[:3]))
     cells.append(Text(lock, style=_STYLES.get(channel.lock, "")))
     cells.append(Text(snr_bar(_value(snr), 10 if wide else 8, glyphs), style="" if channel.open else "dim"))

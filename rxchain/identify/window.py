@@ -9,6 +9,7 @@ import scipy.fft
 from numpy.lib.stride_tricks import sliding_window_view
 from scipy import ndimage
 
+from rxchain.identify.neighbours import without_neighbours
 from rxchain.identify.reference import mirror_fit
 from rxchain.identify.short_time import RATE_HZ
 from rxchain.kernels.smooth_numbers import next_smooth
@@ -16,7 +17,8 @@ from rxchain.streams import ComplexBlock, Floats
 
 REACH_HZ = 500.0  # how far from its nominal frequency a carrier is looked for
 
-_LINE_DB = 12.0  # of a line far from the nominal frequency
+# Of a line far from the nominal frequency; in a short stretch the harmonics of one syllable are lines too.
+_LINE_DB, _LINE_SHORT_DB, _SHORT_S = 15.0, 25.0, 2.5
 _PIECE_S = 1.0
 _AROUND_HZ = 22.0
 _LOUDEST, _OVER_LOUDEST = 0.99, 3.0  # an impulse stands so many times above the loudest hundredth
@@ -50,7 +52,7 @@ def prepare_window(
     shift_hz = _far_reference_hz(wide, reach_hz) if reach_hz > _NEAR_HZ else 0.0
     if shift_hz:
         wide = (wide * np.exp(-2j * np.pi * shift_hz / RATE_HZ * np.arange(len(wide)))).astype(np.complex64)
-    return Prepared(wide, shift_hz, share)
+    return Prepared(without_neighbours(wide), shift_hz, share)
 
 
 def blank_impulses(iq: ComplexBlock) -> tuple[ComplexBlock, float]:
@@ -92,8 +94,11 @@ def at_rate(iq: ComplexBlock, rate_hz: float, keep_hz: tuple[float, float] | Non
 def _far_reference_hz(iq: ComplexBlock, reach_hz: float) -> float:
     """Where the carrier is, if it lies so far off that measuring would not find it; 0 where it does not."""
     line_hz, line_db = _strongest_line(iq, reach_hz)
-    if line_db > _LINE_DB:
+    is_short = len(iq) < _SHORT_S * RATE_HZ
+    if line_db > (_LINE_SHORT_DB if is_short else _LINE_DB):
         return line_hz if abs(line_hz) > _NEAR_HZ else 0.0
+    if is_short:
+        return 0.0
     centre_hz = _squared_centre_hz(iq, reach_hz)
     return 0.0 if centre_hz is None or abs(centre_hz) <= _NEAR_HZ else centre_hz
 

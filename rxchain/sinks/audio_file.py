@@ -26,6 +26,7 @@ class AudioFile:
 
         self.path = path
         self.rate_hz = rate_hz
+        self.n_messages = n_messages
         self.samples = 0
         self._failures = (soundfile.LibsndfileError, OSError)
         large = expected_samples is None or expected_samples * n_messages * 4 > _LARGEST_RIFF_BYTES

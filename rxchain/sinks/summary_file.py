@@ -10,13 +10,14 @@ from pathlib import Path
 from typing import Any
 
 from rxchain import __version__
+from rxchain.chain.channel_settings import ChannelSettings
 from rxchain.chain.receiver import Receiver, messages_of
 from rxchain.errors import SinkError
 from rxchain.sinks.audio_file import AudioFile
 
 
-def summary_of(receiver: Receiver, files: dict[int, tuple[AudioFile, str]]) -> dict[str, Any]:
-    """The summary as nested dictionaries; ``files`` has each channel's audio file and its SHA-256."""
+def summary_of(receiver: Receiver, files: dict[int, list[tuple[AudioFile, str]]]) -> dict[str, Any]:
+    """The summary as nested dictionaries; ``files`` has each channel's audio files and their SHA-256, the latest last."""
     info = receiver.info
     return {
         "rxchain": __version__,
@@ -56,34 +57,42 @@ def utc_text(time: dt.datetime | None) -> str | None:
     return time.astimezone(dt.UTC).isoformat().replace("+00:00", "Z")
 
 
-def _channel(receiver: Receiver, place: int, written: tuple[AudioFile, str] | None) -> dict[str, Any]:
+def _channel(receiver: Receiver, place: int, written: list[tuple[AudioFile, str]] | None) -> dict[str, Any]:
     settings = receiver.channels[place]
     group, row = receiver.group_of(place)
     detector, reason = group.detector(row)
+    emission, given, confidence = receiver.identified(place)
     locked, first_s = group.locked_fraction(row), group.first_lock_s(row)
     return {
         "name": settings.name,
         "frequency_hz": settings.frequency_hz,
-        "emission": settings.emission.name,
-        "emission_given": True,
-        "emission_confidence": 1.0,
+        "emission": emission,
+        "emission_given": given,
+        "emission_confidence": confidence,
         "detector": detector,
         "detector_reason": reason,
-        "audio": None if written is None else _audio(settings, *written),
+        "audio": _audio(settings, written) if written else None,
         "locked_fraction": locked,
         "first_lock_s": first_s,
         "measured": receiver.figures(place).as_json(),
     }
 
 
-def _audio(settings: Any, file: AudioFile, digest: str) -> dict[str, Any]:
-    return {
+def _audio(settings: ChannelSettings, written: list[tuple[AudioFile, str]]) -> dict[str, Any]:
+    file, digest = written[-1]
+    audio = {
         "path": file.path.name,
         "rate_hz": float(file.rate_hz),
-        "messages": list(messages_of(settings)),
+        "messages": list(messages_of(settings))[: file.n_messages],
         "seconds": file.samples / file.rate_hz,
         "sha256": digest,
     }
+    if len(written) > 1:
+        audio["earlier"] = [
+            {"path": one.path.name, "seconds": one.samples / one.rate_hz, "sha256": digest_of}
+            for one, digest_of in written[:-1]
+        ]
+    return audio
 
 
 def _finite(value: Any) -> Any:

@@ -35,9 +35,8 @@ class ChannelBank:
         """``groups`` : bins and channel offsets from the capture's centre, in hertz, of each group."""
         self.plan = plan
         self._groups = [_Group(plan, bins, np.asarray(offsets_hz, dtype=np.float64)) for bins, offsets_hz in groups]
-        self._spectrum = np.empty(
-            (HOPS_A_BATCH, plan.length + max((g.bins for g in self._groups), default=0)), np.complex64
-        )
+        widest = max((g.bins for g in self._groups), default=0)
+        self._spectrum = np.empty((HOPS_A_BATCH, plan.length + widest), np.complex64)
         self._batch = HOPS_A_BATCH * plan.hop
         self._pending = np.zeros(plan.overlap + self._batch, np.complex64)
         self.reset()
@@ -55,6 +54,28 @@ class ChannelBank:
         self._hops = 0
         self._received = 0
         self._delivered = [0] * len(self._groups)
+
+    @property
+    def until_batch(self) -> int:
+        """Samples that complete the batch in hand; groups come and go between batches."""
+        return len(self._pending) - self._filled
+
+    def add(self, bins: int, offsets_hz: Floats, before: int | None = None) -> int:
+        """One more group from the next batch on, at the end or before another; returns the index of its first sample."""
+        group = _Group(self.plan, bins, np.asarray(offsets_hz, dtype=np.float64))
+        place = len(self._groups) if before is None else before
+        self._groups.insert(place, group)
+        if self.plan.length + bins > self._spectrum.shape[1]:
+            wider = np.empty((HOPS_A_BATCH, self.plan.length + bins), np.complex64)
+            wider[:, : self._spectrum.shape[1]] = self._spectrum
+            self._spectrum = wider
+        first = max(0, self._hops * group.hop - self.plan.overlap_of(bins) // 2)
+        self._delivered.insert(place, first)
+        return first
+
+    def drop(self, place: int) -> None:
+        """One group less; those after it move up."""
+        del self._groups[place], self._delivered[place]
 
     def process(self, iq: ComplexBlock) -> list[ComplexBlock]:
         """The channel samples that have become complete, a block for each group."""

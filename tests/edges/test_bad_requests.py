@@ -176,7 +176,7 @@ def test_bad_scenes(capsys, tmp_path, text, rule):
 
 
 @pytest.mark.parametrize(
-    "arguments", [["frobnicate"], [], ["receive"], ["receive", "--loud", "x"], ["identify", "x.cu8"]]
+    "arguments", [["frobnicate"], [], ["receive"], ["receive", "--loud", "x"], ["survey", "x.cu8"]]
 )
 def test_usage(capsys, arguments):
     with pytest.raises(SystemExit) as exit_:

@@ -197,9 +197,9 @@ def test_a_channel_of_any_rate_is_measured_at_one():
 
 def test_a_running_guess_does_not_depend_on_the_blocks():
     iq = np.array([window("A3E", noise_dbfs_hz=-75.0), window("R3E-USB", noise_dbfs_hz=-75.0)])
-    whole = [guess for _, guess in RunningIdentifier(2, RATE_HZ).process(iq)]
-    running = RunningIdentifier(2, RATE_HZ)
-    pieces = [guess for part in np.array_split(iq, 37, axis=1) for _, guess in running.process(part)]
+    whole = RunningIdentifier([None, None], RATE_HZ).process(iq)
+    running = RunningIdentifier([None, None], RATE_HZ)
+    pieces = [guess for part in np.array_split(iq, 37, axis=1) for guess in running.process(part)]
     assert pieces == whole
     assert len(whole) == 5
     assert [guess.firm for guess in whole[-1]] == [True, True]

@@ -63,7 +63,9 @@ def _measured(job: tuple[str, str, int]) -> list[Floats]:
     """Measurements of a batch of windows of one template at each duration, (batch, measurements) each."""
     voices, template, seed = job
     rng, draw = np.random.default_rng(seed), _material(voices).draw
-    windows = np.array([draw_window(template, SECONDS[-1], draw_conditions(rng), draw, rng)[0] for _ in range(_BATCH)])
+    windows = np.array(
+        [draw_window(template, SECONDS[-1], draw_conditions(template, rng), draw, rng)[0] for _ in range(_BATCH)]
+    )
     lengths = [round(seconds * RATE_HZ) for seconds in SECONDS]
     return [
         measure(np.array([prepare_window(one[:n], RATE_HZ, REACH_HZ).iq for one in windows])).values for n in lengths

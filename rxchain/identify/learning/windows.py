@@ -19,6 +19,7 @@ from rxchain.synthesis.modulation import Envelope, Modulation, modulate
 from rxchain.synthesis.propagation import Fading, faded
 
 _OFFSET_HZ, _FAR_HZ, _FAR_SHARE = 100.0, 450.0, 0.1
+_UNPLACED = ("J3E", "B8E/no pilot", "QAM/no pilot")  # nothing shows how far off they are
 _BANDS_HZ = ((300.0, 3_000.0), (300.0, 2_700.0), (100.0, 4_500.0), (200.0, 3_400.0), (50.0, 5_000.0))
 _SPEECH_BANDS_HZ = ((300.0, 2_700.0), (300.0, 3_000.0), (200.0, 3_400.0), (100.0, 2_900.0))
 _BEAT_WIDTH_HZ = 500.0
@@ -39,14 +40,14 @@ class Conditions:
     drift_hz_s: float = 0.0
 
 
-def draw_conditions(rng: np.random.Generator) -> Conditions:
-    """Half of the windows fade; SNR evenly from -1 to 36 dB."""
+def draw_conditions(template: str, rng: np.random.Generator) -> Conditions:
+    """Half of the windows fade; SNR evenly from -1 to 36 dB; a tenth of those that show where they are lie far off."""
     fading = None
     if rng.random() < 0.5:
         paths = 2 if rng.random() < 0.8 else 1
         fading = Fading(paths, rng.uniform(0.3e-3, 2.5e-3), float(np.exp(rng.uniform(np.log(0.1), np.log(2.0)))))
     drift_hz_s = rng.uniform(-_DRIFT_HZ_S, _DRIFT_HZ_S) if rng.random() < 0.2 else 0.0
-    furthest_hz = _FAR_HZ if rng.random() < _FAR_SHARE else _OFFSET_HZ
+    furthest_hz = _FAR_HZ if rng.random() < _FAR_SHARE and template not in _UNPLACED else _OFFSET_HZ
     return Conditions(rng.uniform(-1.0, 36.0), fading, rng.uniform(-furthest_hz, furthest_hz), drift_hz_s)
 
 
