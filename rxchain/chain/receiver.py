@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections import deque
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -75,6 +75,7 @@ class Receiver:
                 self._audio_rates[place] = run.group.audio_rate_hz
         self._auto = self._identifies(channels)
         self.samples = self.samples_lost = self.gaps = self.overloaded = 0
+        self._in_gap = False  # a gap may be told in parts
         trends = len(channels)
         self._offsets: list[deque[float]] = [deque(maxlen=_TREND_POINTS) for _ in range(trends)]
         self._snrs: list[deque[float]] = [deque(maxlen=_TREND_POINTS) for _ in range(trends)]
@@ -100,16 +101,20 @@ class Receiver:
         """The audio that this block completes."""
         audio: list[ChannelAudio] = []
         if block.samples_lost:
+            self.gaps += not self._in_gap
             rate_hz = self.info.sample_rate_hz
             for run in self._runs:
                 run.group.mark_lost(self.elapsed_s, block.samples_lost / rate_hz)
-            self.gaps += 1
             left = block.samples_lost
             while left:
                 n = min(left, _SILENCE_PIECE)
                 audio += self._through(np.zeros(n, np.complex64))
                 left -= n
             self.samples_lost += block.samples_lost
+        self._in_gap = not len(block.iq) and (self._in_gap or block.samples_lost > 0)
+        if block.centre_hz is not None:
+            self._bank.retune(block.centre_hz - self.info.centre_hz)
+            self.info = replace(self.info, centre_hz=block.centre_hz)
         self.overloaded += block.overloaded
         self.samples += len(block.iq)
         return audio + self._through(block.iq)

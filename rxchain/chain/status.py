@@ -72,6 +72,8 @@ class ReceiverStatus:
     elapsed_s : stream time since the first sample. progress : 0 to 1 for a recording, None where there is no end.
     samples_lost, gaps, overload_fraction, late_blocks : the separate counts of what went wrong.
     spectrum_dbfs : mean power per bin across the capture, lowest frequency first; empty where not kept.
+    source_trouble : what is wrong with the source now, None where nothing is. short_buffers, reopened : a receiver's
+    buffers that came short, and how often it was lost and found again. gain_db : the receiver's gain where it is known.
     sound : how it stands with the sound, None where nobody listens.
     """
 
@@ -88,4 +90,8 @@ class ReceiverStatus:
     late_blocks: int
     spectrum_dbfs: Floats
     channels: tuple[ChannelStatus, ...]
+    source_trouble: str | None = None
+    short_buffers: int = 0
+    reopened: int = 0
+    gain_db: float | None = None
     sound: SoundStatus | None = None

@@ -19,6 +19,7 @@ os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
 import numpy as np
 
+from rxchain.chain.centre_choice import centre_beside, channels_on_spike
 from rxchain.chain.channel_settings import ChannelSettings
 from rxchain.chain.receiver import Receiver
 from rxchain.chain.runner import Runner, span_text
@@ -30,7 +31,8 @@ from rxchain.dashboard.display import Display, make_display
 from rxchain.errors import FaultError, SettingError
 from rxchain.sinks.audio_folder import AudioFolder, NoAudio
 from rxchain.sinks.several import Several
-from rxchain.sources.opening import open_source
+from rxchain.sources.health import SourceHealth, Watched
+from rxchain.sources.opening import RECEIVER_PREFIX, open_source
 from rxchain.sources.pacing import Paced
 
 
@@ -64,7 +66,10 @@ def receive(request: Request) -> Result:
         raise SettingError("channel", "(none)", "there is nothing to receive", "add --channel 'FREQUENCY EMISSION'")
     check_names(request.channels)
     _lift_allocation_threshold()
-    source = open_source(request.source, **parsed_options(request.options))
+    options = parsed_options(request.options)
+    if request.source.partition(":")[0] == RECEIVER_PREFIX:
+        options = _receiver_options(options, request.channels)
+    source = open_source(request.source, **options)
     is_live = source.info.n_samples is None
     stop = threading.Event()
     live_pace = request.live_pace or request.listen is not None
@@ -83,14 +88,14 @@ def receive(request: Request) -> Result:
     if is_live or live_pace:
         sys.setswitchinterval(1e-4)  # the display must not hold the numeric thread up for 5 ms at a time
     display: Display = make_display(quiet=request.quiet)
-    late = (lambda: source.late_blocks) if isinstance(source, Paced) else (lambda: 0)
+    watched = source if isinstance(source, Watched) else None
     runner = Runner(
         source,
         receiver,
         Several([sink, listening]) if listening else sink,
         time.monotonic,
         display.show if display.wants_status else None,
-        late,
+        (lambda: watched.health) if watched else SourceHealth,
         listening.status if listening else lambda: None,
     )
 
@@ -111,6 +116,29 @@ def receive(request: Request) -> Result:
         print(f"rxchain: {one_line(str(fault))}; {span_text(receiver)}, and that is kept", file=sys.stderr)
         return Result(receiver, fault.exit_status)
     return Result(receiver, 130 if outcome.stopped else 0)
+
+
+def _receiver_options(options: dict[str, Any], channels: tuple[ChannelSettings, ...]) -> dict[str, Any]:
+    """A receiver's options with what follows from the channels, and warnings of what may be regretted."""
+    if options.get("bias_voltage"):
+        print(
+            "rxchain: bias voltage on: about 4.5 V on the antenna line, which harms what is not made for it; "
+            "it goes off when this run ends",
+            file=sys.stderr,
+        )
+    rate_hz = options.get("rate_hz")
+    if rate_hz is None:
+        return options
+    if options.get("centre_hz") is None:
+        return options | {"centre_hz": centre_beside(channels, rate_hz)}
+    spoilt = channels_on_spike(channels, options["centre_hz"])
+    if spoilt:
+        print(
+            f"rxchain: the receiver's own spike at its centre lies in {', '.join(spoilt)}; "
+            "leave out --centre, and it is kept out of every channel",
+            file=sys.stderr,
+        )
+    return options
 
 
 @contextmanager

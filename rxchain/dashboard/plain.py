@@ -79,6 +79,14 @@ def progress_line(status: ReceiverStatus) -> str:
         parts.append(f"overload {100 * status.overload_fraction:.2g} %")
     if status.late_blocks:
         parts.append(f"{status.late_blocks} blocks late")
+    if status.short_buffers:
+        parts.append(f"{status.short_buffers} buffers short")
+    if status.reopened:
+        parts.append(f"receiver lost and found again {status.reopened} time(s)")
+    if status.gain_db is not None:
+        parts.append(f"gain {status.gain_db:.1f} dB")
+    if status.source_trouble is not None:
+        parts.append(f"NO SAMPLES: {clean(status.source_trouble)}")
     if status.sound is not None:
         parts.append(sound_text(status.sound))
     return ", ".join(parts)
