@@ -34,12 +34,15 @@ class Block:
     index : absolute index of the first sample; samples lost on the way count.
     samples_lost : how many samples are missing right before this block.
     overloaded : how many samples of this block touched the converter's rails.
+    centre_hz : frequency at the middle from this block on, where it has changed; None where it has not. Then more samples
+        are missing before it than the channel bank remembers.
     """
 
     iq: ComplexBlock
     index: int
     samples_lost: int = 0
     overloaded: int = 0
+    centre_hz: float | None = None
 
 
 @dataclass(frozen=True, slots=True)

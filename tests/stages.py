@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 
 from rxchain.audio.gain_control import GainControl, GainSettings
+from rxchain.audio.limiter import Limiter
 from rxchain.audio.rate_conversion import RateConverter
 from rxchain.audio.squelch import Gate, Squelch
 from rxchain.carrier.fallback import FallbackFollower
@@ -157,6 +158,7 @@ STAGES: dict[str, Entry] = {
     "fixed gain": Entry(
         lambda c: GainControl(GainSettings(), np.full(c, -6.0), 2, RATE_HZ), audio, np.float32, np.float32
     ),
+    "limiter": Entry(lambda c: Limiter(c, 2, RATE_HZ, -30.0, 60), audio, np.float32, np.float32),
     "rate conversion": Entry(
         lambda c: RateConverter(c, 2, 12_345.67, 12_000.0), audio, np.float32, np.float32, ratio=12_000.0 / 12_345.67
     ),

@@ -9,13 +9,11 @@ from __future__ import annotations
 
 import numpy as np
 
-from rxchain.kernels.fir import kaiser_beta
+from rxchain.kernels.sinc_interpolation import SincInterpolator
 from rxchain.streams import FloatBlock
 
 _HALF = 32  # taps on either side
-_PHASES = 512
 _QUANTUM = 256
-_STOP_DB = 90.0
 
 
 class RateConverter:
@@ -28,12 +26,7 @@ class RateConverter:
     def __init__(self, n_channels: int, n_messages: int, rate_in_hz: float, rate_out_hz: float) -> None:
         self._shape = n_channels, n_messages
         self._step = rate_in_hz / rate_out_hz
-        cutoff = min(1.0, rate_out_hz / rate_in_hz) * 0.5
-        # Offsets of the taps from the wanted instant, for each phase, and one more to interpolate towards.
-        t = np.arange(-_HALF + 1, _HALF + 1) - np.arange(_PHASES + 1)[:, None] / _PHASES
-        beta = kaiser_beta(_STOP_DB)
-        window = np.i0(beta * np.sqrt(np.maximum(0.0, 1.0 - (t / _HALF) ** 2))) / np.i0(beta)
-        self._taps = (2.0 * cutoff * np.sinc(2.0 * cutoff * t) * window).astype(np.float32)
+        self._sinc = SincInterpolator(self._step, _HALF)
         self.reset()
 
     @property
@@ -69,13 +62,7 @@ class RateConverter:
 
     def _convert(self) -> FloatBlock:
         position = (self._made + np.arange(_QUANTUM)) * self._step
-        whole = np.floor(position).astype(np.int64)
-        phase = (position - whole) * _PHASES
-        index = phase.astype(np.int64)
-        blend = (phase - index).astype(np.float32)[:, None]
-        taps = self._taps[index] * (1 - blend) + self._taps[index + 1] * blend
-        at = whole[:, None] + np.arange(-_HALF + 1, _HALF + 1) - self._first
-        output: FloatBlock = (self._kept[:, :, at] * taps).sum(axis=3)
+        output = self._sinc.at(self._kept, self._first, position)
         self._made += _QUANTUM
         spent = int(np.floor(self._made * self._step)) - (_HALF - 1) - self._first
         self._kept, self._first = self._kept[:, :, spent:], self._first + spent

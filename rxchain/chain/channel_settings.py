@@ -38,6 +38,7 @@ class ChannelSettings:
     transmit_response : measured gain of a vestigial transmitter: frequencies from the carrier in hertz, positive on the
         side sent whole, and gains; None where a straight slope is assumed.
     log : ``off``, ``transmissions`` or ``all``: what the logbook keeps of the channel.
+    delay : ``auto`` is ``live`` for a channel that is heard and ``full`` for others.
     emission_given : whether the emission is the user's word; where not, it is a first try, to be identified.
     audio_given : likewise the audio band.
     agc_db : ``auto``, ``off`` or a fixed gain; squelch_db : ``auto``, ``off`` or the SNR that opens.
@@ -49,7 +50,7 @@ class ChannelSettings:
     audio_hz: tuple[float, float]
     detector: str = AUTO
     sideband: str = "both"
-    delay: str = "full"
+    delay: str = AUTO
     align_hz: float = 0.0
     aligns_by_speech: bool = False
     beat_hz: float = 700.0
@@ -117,7 +118,7 @@ def channel_from_table(table: Mapping[str, object], folder: Path = Path()) -> Ch
         audio_hz=audio_hz,
         detector=_one_of("detector", values.get("detector", AUTO), DETECTORS),
         sideband=_one_of("sideband", values.get("sideband", "both"), SIDEBANDS),
-        delay=_one_of("delay", values.get("delay", "full"), DELAYS),
+        delay=_one_of("delay", values["delay"], DELAYS) if "delay" in values else AUTO,
         align_hz=_align(values.get("align", OFF)),
         aligns_by_speech=values.get("align") == SPEECH,
         beat_hz=beat_hz,

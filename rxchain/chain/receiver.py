@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections import deque
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -90,6 +90,7 @@ class Receiver:
         self.samples = self.samples_lost = self.gaps = self.overloaded = 0
         self.losses: deque[tuple[float, float]] = deque(maxlen=_MOST_EVENTS)  # seconds: when, how much
         self.overloads: deque[tuple[float, int]] = deque(maxlen=_MOST_EVENTS)  # when, how many samples
+        self._in_gap = False  # a gap may be told in parts
         trends = len(channels)
         self._offsets: list[deque[float]] = [deque(maxlen=_TREND_POINTS) for _ in range(trends)]
         self._snrs: list[deque[float]] = [deque(maxlen=_TREND_POINTS) for _ in range(trends)]
@@ -115,10 +116,10 @@ class Receiver:
         """The audio that this block completes."""
         audio: list[ChannelAudio] = []
         if block.samples_lost:
+            self.gaps += not self._in_gap
             rate_hz = self.info.sample_rate_hz
             for run in self._runs:
                 run.group.mark_lost(self.elapsed_s, block.samples_lost / rate_hz)
-            self.gaps += 1
             self.losses.append((self.elapsed_s, block.samples_lost / rate_hz))
             left = block.samples_lost
             while left:
@@ -128,6 +129,10 @@ class Receiver:
             self.samples_lost += block.samples_lost
         if block.overloaded:
             self.overloads.append((self.elapsed_s, block.overloaded))
+        self._in_gap = not len(block.iq) and (self._in_gap or block.samples_lost > 0)
+        if block.centre_hz is not None:
+            self._bank.retune(block.centre_hz - self.info.centre_hz)
+            self.info = replace(self.info, centre_hz=block.centre_hz)
         self.overloaded += block.overloaded
         self.samples += len(block.iq)
         return audio + self._through(block.iq)

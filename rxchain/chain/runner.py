@@ -9,8 +9,9 @@ from dataclasses import dataclass
 from typing import Protocol
 
 from rxchain.chain.receiver import ChannelAudio, Receiver
-from rxchain.chain.status import ReceiverStatus
+from rxchain.chain.status import ReceiverStatus, SoundStatus
 from rxchain.errors import FaultError
+from rxchain.sources.health import SourceHealth
 from rxchain.sources.protocol import Source
 
 _STATUS_EVERY_S = 0.25
@@ -37,7 +38,7 @@ class Runner:
 
     clock : seconds, steadily rising; paces the snapshots. show : takes a snapshot now and then; None: nobody looks.
     after_block : called in the numeric thread after each block and after the last.
-    late_blocks : asks the source's pacing how many blocks came late so far.
+    health : asks how it stands with the source. sound : asks how it stands with the sound.
     """
 
     def __init__(
@@ -47,11 +48,13 @@ class Runner:
         sink: AudioSink,
         clock: Callable[[], float],
         show: Callable[[ReceiverStatus], None] | None = None,
-        late_blocks: Callable[[], int] = lambda: 0,
+        health: Callable[[], SourceHealth] = SourceHealth,
+        sound: Callable[[], SoundStatus | None] = lambda: None,
         after_block: Callable[[], None] = lambda: None,
     ) -> None:
         self._source, self._receiver, self._sink = source, receiver, sink
-        self._clock, self._show, self._late_blocks = clock, show, late_blocks
+        self._clock, self._show, self._health = clock, show, health
+        self._sound = sound
         self._after_block = after_block
         self._stop = threading.Event()
         self._started = 0.0
@@ -89,6 +92,7 @@ class Runner:
     def status(self) -> ReceiverStatus:
         """A snapshot; call it from the numeric thread."""
         receiver, info = self._receiver, self._receiver.info
+        health = self._health()
         elapsed_s, spent_s = receiver.elapsed_s, self._clock() - self._started
         total_s = info.n_samples / info.sample_rate_hz if info.n_samples else None
         return ReceiverStatus(
@@ -102,9 +106,14 @@ class Runner:
             samples_lost=receiver.samples_lost,
             gaps=receiver.gaps,
             overload_fraction=receiver.overload_fraction,
-            late_blocks=self._late_blocks(),
+            late_blocks=health.late,
             spectrum_dbfs=receiver.spectrum_dbfs(),
             channels=tuple(receiver.channel_status(place) for place in range(len(receiver.channels))),
+            source_trouble=health.trouble,
+            short_buffers=health.short,
+            reopened=health.reopened,
+            gain_db=health.gain_db,
+            sound=self._sound(),
         )
 
     def _deliver(self, audio: list[ChannelAudio]) -> None:

@@ -25,7 +25,7 @@ from rxchain.chain.channel_settings import ChannelSettings, channel_from_table
 from rxchain.errors import RequestError, SettingError
 from rxchain.tables import load_table
 
-_SOURCE_KEYS = ("path", "receiver", "rate", "centre", "capture", "gain", "ppm", "direct_sampling")
+_SOURCE_KEYS = ("path", "receiver", "rate", "centre", "capture", "gain", "ppm", "direct_sampling", "bias_voltage")
 
 
 @dataclass(frozen=True, slots=True)

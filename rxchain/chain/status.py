@@ -42,12 +42,39 @@ class ChannelStatus:
 
 
 @dataclass(frozen=True, slots=True)
+class SoundStatus:
+    """What is heard, and how it stands with the sound output.
+
+    heard : names as ``--listen`` takes them; places : the same as places in the list of channels.
+    delay_s : from a sample's arrival to its being heard, the longest of the last second; None where nothing plays.
+    underruns : how often the output ran dry. skips : how often too much audio had piled up and was left out.
+    losses : how often the output went away. speed : stream seconds a second of the output's clock.
+    trouble : what is wrong with the output now, None where nothing is.
+    """
+
+    output: str
+    heard: str
+    places: tuple[int, ...]
+    volume_db: float
+    muted: bool
+    delay_s: float | None
+    underruns: int
+    skips: int
+    losses: int
+    speed: float
+    trouble: str | None
+
+
+@dataclass(frozen=True, slots=True)
 class ReceiverStatus:
     """The whole receiver at the moment of the snapshot.
 
     elapsed_s : stream time since the first sample. progress : 0 to 1 for a recording, None where there is no end.
     samples_lost, gaps, overload_fraction, late_blocks : the separate counts of what went wrong.
     spectrum_dbfs : mean power per bin across the capture, lowest frequency first; empty where not kept.
+    source_trouble : what is wrong with the source now, None where nothing is. short_buffers, reopened : a receiver's
+    buffers that came short, and how often it was lost and found again. gain_db : the receiver's gain where it is known.
+    sound : how it stands with the sound, None where nobody listens.
     """
 
     source: str
@@ -63,3 +90,8 @@ class ReceiverStatus:
     late_blocks: int
     spectrum_dbfs: Floats
     channels: tuple[ChannelStatus, ...]
+    source_trouble: str | None = None
+    short_buffers: int = 0
+    reopened: int = 0
+    gain_db: float | None = None
+    sound: SoundStatus | None = None

@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import argparse
 
+from rxchain.cli.listen_options import add_listen_arguments, listen_of
 from rxchain.cli.source_options import add_source_arguments, given_options
 
 _EXAMPLES = """\
 examples:
   rxchain receive coast.sigmf-meta --channel "7.1MHz J3E-LSB name=net" --out heard
   rxchain receive station.toml --out heard
+  rxchain receive station.toml --listen harbour
   rxchain receive band.cu8 --rate 2.4MHz --centre 118.5MHz --channel "118.1MHz A3E"
 
 A channel is FREQUENCY EMISSION [key=value ...], with auto for an EMISSION that is to be found out; the keys are those of
@@ -35,9 +37,12 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--log", metavar="DIR", help="folder of the logbook, for channels with a log key; OUT/log if left out"
     )
     parser.add_argument(
-        "--pace", choices=("live", "fast"), default="fast", help="recordings at their own pace, or as fast as it goes"
+        "--pace",
+        choices=("live", "fast"),
+        help="recordings at their own pace, or as fast as it goes; fast unless listened to",
     )
     parser.add_argument("--quiet", action="store_true", help="show nothing while receiving")
+    add_listen_arguments(parser)
     add_source_arguments(parser)
 
 
@@ -58,5 +63,7 @@ def run(arguments: argparse.Namespace) -> int:
         channels, station_log = station.channels + channels, station.log
     out = Path(arguments.out) if arguments.out else None
     log = Path(arguments.log) if arguments.log else station_log
-    request = Request(source, options, channels, out, log, live_pace=arguments.pace == "live", quiet=arguments.quiet)
+    listen = listen_of(arguments)
+    live_pace = arguments.pace == "live"
+    request = Request(source, options, channels, out, log, live_pace=live_pace, quiet=arguments.quiet, listen=listen)
     return receive(request).exit_status

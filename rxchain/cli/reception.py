@@ -20,16 +20,20 @@ os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
 import numpy as np
 
+from rxchain.chain.centre_choice import centre_beside, channels_on_spike
 from rxchain.chain.channel_settings import OFF, ChannelSettings
 from rxchain.chain.receiver import Receiver
 from rxchain.chain.runner import Runner, span_text
 from rxchain.chain.station import check_names
+from rxchain.cli.listen_options import Listen, live_where_heard, open_listening
 from rxchain.cli.main import one_line
 from rxchain.cli.source_options import parsed_options
 from rxchain.dashboard.display import Display, make_display
 from rxchain.errors import FaultError, SettingError
 from rxchain.sinks.audio_folder import AudioFolder, NoAudio
-from rxchain.sources.opening import open_source
+from rxchain.sinks.several import Several
+from rxchain.sources.health import SourceHealth, Watched
+from rxchain.sources.opening import RECEIVER_PREFIX, open_source
 from rxchain.sources.pacing import Paced
 
 if TYPE_CHECKING:
@@ -40,7 +44,8 @@ if TYPE_CHECKING:
 class Request:
     """What to receive, and what to do with it.
 
-    options : the source's further keys, as written. log : folder of the logbook, None for the usual one.
+    options : the source's further keys, as written. log : folder of the logbook, None for the usual one. listen : what to
+    hear; it goes at live pace then.
     """
 
     source: str
@@ -50,6 +55,7 @@ class Request:
     log: Path | None
     live_pace: bool
     quiet: bool
+    listen: Listen | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -67,25 +73,40 @@ def receive(request: Request) -> Result:
     check_names(request.channels)
     log_folder = _log_folder(request)
     _lift_allocation_threshold()
-    source = open_source(request.source, **parsed_options(request.options))
+    options = parsed_options(request.options)
+    if request.source.partition(":")[0] == RECEIVER_PREFIX:
+        options = _receiver_options(options, request.channels)
+    source = open_source(request.source, **options)
     is_live = source.info.n_samples is None
     stop = threading.Event()
-    if request.live_pace and not is_live:
+    live_pace = request.live_pace or request.listen is not None
+    if live_pace and not is_live:
         source = Paced(source, time.monotonic, lambda seconds: stop.wait(seconds))
+    listening = None
     try:
-        receiver = Receiver(source.info, request.channels)
+        receiver = Receiver(source.info, live_where_heard(request.channels, request.listen))
+        listening = open_listening(request.listen, receiver) if request.listen else None
         sink = AudioFolder(request.out, receiver) if request.out else NoAudio()
         log = None if log_folder is None else _station_log(log_folder, receiver)
     except BaseException:
+        if listening is not None:
+            listening.close()
         source.close()
         raise
-    if is_live or request.live_pace:
+    if is_live or live_pace:
         sys.setswitchinterval(1e-4)  # the display must not hold the numeric thread up for 5 ms at a time
     display: Display = make_display(quiet=request.quiet)
-    late = (lambda: source.late_blocks) if isinstance(source, Paced) else (lambda: 0)
-    after_block = log.after_block if log is not None else lambda: None
-    show = display.show if display.wants_status else None
-    runner = Runner(source, receiver, sink, time.monotonic, show, late, after_block)
+    watched = source if isinstance(source, Watched) else None
+    runner = Runner(
+        source,
+        receiver,
+        Several([sink, listening]) if listening else sink,
+        time.monotonic,
+        display.show if display.wants_status else None,
+        (lambda: watched.health) if watched else SourceHealth,
+        listening.status if listening else lambda: None,
+        log.after_block if log is not None else lambda: None,
+    )
 
     def stop_all() -> None:
         stop.set()
@@ -93,6 +114,8 @@ def receive(request: Request) -> Result:
 
     with _stopped_by_signals(stop_all), display.running(stop_all):
         outcome = runner.run()
+        if listening is not None:
+            listening.close()
     fault = outcome.fault
     if log is not None:
         log.close(one_line(str(fault)) if fault else "stopped" if outcome.stopped else "ended")
@@ -126,6 +149,29 @@ def _station_log(folder: Path, receiver: Receiver) -> StationLog:
     from rxchain.logbook.station_log import StationLog
 
     return StationLog(folder, receiver, time.monotonic, lambda: dt.datetime.now(dt.UTC))
+
+
+def _receiver_options(options: dict[str, Any], channels: tuple[ChannelSettings, ...]) -> dict[str, Any]:
+    """A receiver's options with what follows from the channels, and warnings of what may be regretted."""
+    if options.get("bias_voltage"):
+        print(
+            "rxchain: bias voltage on: about 4.5 V on the antenna line, which harms what is not made for it; "
+            "it goes off when this run ends",
+            file=sys.stderr,
+        )
+    rate_hz = options.get("rate_hz")
+    if rate_hz is None:
+        return options
+    if options.get("centre_hz") is None:
+        return options | {"centre_hz": centre_beside(channels, rate_hz)}
+    spoilt = channels_on_spike(channels, options["centre_hz"])
+    if spoilt:
+        print(
+            f"rxchain: the receiver's own spike at its centre lies in {', '.join(spoilt)}; "
+            "leave out --centre, and it is kept out of every channel",
+            file=sys.stderr,
+        )
+    return options
 
 
 @contextmanager

@@ -6,22 +6,35 @@ import argparse
 from collections.abc import Mapping
 from typing import Any
 
-_KEYS = ("rate", "centre", "capture", "gain", "ppm", "direct_sampling")
+_KEYS = ("rate", "centre", "capture", "gain", "ppm", "direct_sampling", "bias_voltage")
 
 
 def add_source_arguments(parser: argparse.ArgumentParser) -> None:
     """The arguments that a source may need."""
     parser.add_argument("--rate", metavar="FREQUENCY", help="samples a second, of a raw file or the receiver")
     parser.add_argument(
-        "--centre", metavar="FREQUENCY", help="frequency at the middle, of a file that doesn't say, or to tune to"
+        "--centre",
+        metavar="FREQUENCY",
+        help="frequency at the middle, of a file that doesn't say, or to tune to "
+        "(left out, a receiver is tuned so that its own spike at the middle is in no channel)",
     )
     parser.add_argument(
         "--capture", metavar="N", help="which capture of a recording whose captures lie at different frequencies"
     )
-    parser.add_argument("--gain", metavar="DB", help="receiver's gain in dB; auto (its own) if left out")
-    parser.add_argument("--ppm", metavar="N", help="receiver's frequency correction, parts per million")
+    parser.add_argument(
+        "--gain",
+        metavar="DB",
+        help="receiver's gain in dB, auto (its own; this if left out), or headroom (just below overload)",
+    )
+    parser.add_argument("--ppm", metavar="N", help="error of the receiver's clock, parts per million")
     parser.add_argument(
         "--direct-sampling", choices=("i", "q"), metavar="i|q", help="receiver's input that bypasses the tuner"
+    )
+    parser.add_argument(
+        "--bias-voltage",
+        choices=("on", "off"),
+        metavar="on|off",
+        help="voltage on the antenna line to feed a preamplifier; harms what is not made for it; off if left out",
     )
 
 
@@ -39,17 +52,36 @@ def parsed_options(options: dict[str, str]) -> dict[str, Any]:
     for key in ("rate", "centre"):
         if key in options:
             parsed[f"{key}_hz"] = parse_frequency_hz(options[key], key)
-    for key in ("capture", "ppm"):
-        if key in options:
-            try:
-                parsed[key] = int(options[key])
-            except ValueError:
-                raise SettingError(key, options[key], "must be a whole number") from None
-    if options.get("gain", "auto") != "auto":
+    if "capture" in options:
         try:
-            parsed["gain_db"] = float(options["gain"].removesuffix("dB"))
+            parsed["capture"] = int(options["capture"])
         except ValueError:
-            raise SettingError("gain", options["gain"], "must be auto or a number of dB") from None
+            raise SettingError("capture", options["capture"], "must be a whole number") from None
+    if "ppm" in options:
+        parsed["ppm"] = _number("ppm", options["ppm"], "must be a number of millionths")
+    gain = options.get("gain", "auto")
+    if gain == "headroom":
+        parsed["headroom"] = True
+    elif gain != "auto":
+        parsed["gain_db"] = _number("gain", gain.removesuffix("dB"), "must be auto, headroom or a number of dB")
+    if "bias_voltage" in options:
+        if options["bias_voltage"] not in ("on", "off"):
+            raise SettingError("bias_voltage", options["bias_voltage"], "must be on or off")
+        parsed["bias_voltage"] = options["bias_voltage"] == "on"
     if "direct_sampling" in options:
         parsed["direct_sampling"] = options["direct_sampling"]
     return parsed
+
+
+def _number(key: str, text: str, rule: str) -> float:
+    import math
+
+    from rxchain.errors import SettingError
+
+    try:
+        value = float(text)
+    except ValueError:
+        value = math.nan
+    if not math.isfinite(value):
+        raise SettingError(key, text, rule)
+    return value

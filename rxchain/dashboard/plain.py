@@ -6,7 +6,7 @@ from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from typing import TextIO
 
-from rxchain.chain.status import ChannelStatus, ReceiverStatus
+from rxchain.chain.status import ChannelStatus, ReceiverStatus, SoundStatus
 from rxchain.dashboard.wording import LOCK_WORDS, clean, duration, frequency, with_uncertainty
 
 _EVERY_S = 10.0
@@ -79,6 +79,29 @@ def progress_line(status: ReceiverStatus) -> str:
         parts.append(f"overload {100 * status.overload_fraction:.2g} %")
     if status.late_blocks:
         parts.append(f"{status.late_blocks} blocks late")
+    if status.short_buffers:
+        parts.append(f"{status.short_buffers} buffers short")
+    if status.reopened:
+        parts.append(f"receiver lost and found again {status.reopened} time(s)")
+    if status.gain_db is not None:
+        parts.append(f"gain {status.gain_db:.1f} dB")
+    if status.source_trouble is not None:
+        parts.append(f"NO SAMPLES: {clean(status.source_trouble)}")
+    if status.sound is not None:
+        parts.append(sound_text(status.sound))
+    return ", ".join(parts)
+
+
+def sound_text(sound: SoundStatus) -> str:
+    """What is heard, and what went wrong with it."""
+    parts = [f"hearing {clean(sound.heard) or 'nothing'}" + (" (muted)" if sound.muted else "")]
+    if sound.delay_s is not None:
+        parts.append(f"{1e3 * sound.delay_s:.0f} ms after the receiver")
+    for count, words in ((sound.underruns, "underrun(s)"), (sound.skips, "skip(s)"), (sound.losses, "output loss(es)")):
+        if count:
+            parts.append(f"{count} {words}")
+    if sound.trouble is not None:
+        parts.append(f"NO SOUND: {clean(sound.trouble)}")
     return ", ".join(parts)
 
 

@@ -23,8 +23,10 @@ def open_source(
     centre_hz: float | None = None,
     capture: int | None = None,
     gain_db: float | None = None,
-    ppm: int = 0,
+    headroom: bool = False,
+    ppm: float = 0.0,
     direct_sampling: str | None = None,
+    bias_voltage: bool = False,
 ) -> Source:
     """The source that ``name`` means, opened; raises :class:`SourceError` or :class:`SettingError`.
 
@@ -32,13 +34,20 @@ def open_source(
     """
     prefix, _, serial = name.partition(":")
     if prefix == RECEIVER_PREFIX:
-        from rxchain.sources.rtlsdr_receiver import ReceiverSettings, RtlsdrReceiver
+        from rxchain.sources.rtlsdr_driver import ReceiverSettings
+        from rxchain.sources.rtlsdr_receiver import RtlsdrReceiver
 
         if rate_hz is None or centre_hz is None:
             missing = "rate" if rate_hz is None else "centre"
             raise SettingError(missing, "(none)", "a receiver has to be told", f"add --{missing} FREQUENCY")
-        return RtlsdrReceiver(serial or None, ReceiverSettings(rate_hz, centre_hz, gain_db, ppm, direct_sampling))
-    for key, value in (("gain", gain_db), ("ppm", ppm or None), ("direct_sampling", direct_sampling)):
+        settings = ReceiverSettings(rate_hz, centre_hz, gain_db, ppm, direct_sampling, headroom, bias_voltage)
+        return RtlsdrReceiver(serial or None, settings)
+    for key, value in (
+        ("gain", "headroom" if headroom else gain_db),
+        ("ppm", ppm or None),
+        ("direct_sampling", direct_sampling),
+        ("bias_voltage", "on" if bias_voltage else None),
+    ):
         if value is not None:
             raise SettingError(key, value, "is for receivers", "leave it out for a recording")
     path = Path(name)

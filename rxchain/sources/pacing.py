@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 
+from rxchain.sources.health import SourceHealth
 from rxchain.sources.protocol import Source, SourceInfo
 from rxchain.streams import Block
 
@@ -20,6 +21,11 @@ class Paced:
     def __init__(self, source: Source, clock: Callable[[], float], wait: Callable[[float], object]) -> None:
         self._source, self._clock, self._wait = source, clock, wait
         self.late_blocks = 0
+
+    @property
+    def health(self) -> SourceHealth:
+        """What went wrong so far."""
+        return SourceHealth(late=self.late_blocks)
 
     @property
     def info(self) -> SourceInfo:

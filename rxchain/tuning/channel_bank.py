@@ -73,6 +73,14 @@ class ChannelBank:
         self._delivered.insert(place, first)
         return first
 
+    def retune(self, shift_hz: float) -> None:
+        """The capture's middle has moved up by so much, all channels stay where they are; those outside are silent.
+
+        To be called when everything the bank remembers is silence: what it remembers was heard where the middle was.
+        """
+        for k, group in enumerate(self._groups):
+            self._groups[k] = _Group(self.plan, group.bins, group.offsets_hz - shift_hz, silence_outside=True)
+
     def drop(self, place: int) -> None:
         """One group less; those after it move up."""
         del self._groups[place], self._delivered[place]
@@ -138,13 +146,15 @@ class ChannelBank:
 class _Group:
     """Channels of one width: their slices, responses and rotations."""
 
-    def __init__(self, plan: BankPlan, bins: int, offsets_hz: Floats) -> None:
+    def __init__(self, plan: BankPlan, bins: int, offsets_hz: Floats, silence_outside: bool = False) -> None:
         self.bins = bins
+        self.offsets_hz = offsets_hz
         self._length = plan.length
         self._discard = plan.overlap_of(bins)
         self.hop = bins - self._discard
         limit_hz = plan.capture_rate_hz / 2.0
-        if len(offsets_hz) and np.max(np.abs(offsets_hz)) > limit_hz:
+        outside = np.abs(offsets_hz) > limit_hz
+        if outside.any() and not silence_outside:
             worst_hz = offsets_hz[np.argmax(np.abs(offsets_hz))]
             raise SettingError(
                 "frequency", f"{worst_hz:+.0f}Hz from the centre", f"outside the capture's ±{limit_hz:.0f} Hz"
@@ -154,6 +164,8 @@ class _Group:
         self._first_bin = nearest.astype(np.int64) - bins // 2
         self._start = self._first_bin % plan.length
         self._responses = _responses(plan, bins, exact_bin - nearest)
+        if outside.any():
+            self._responses = np.where(outside[:, None], np.complex64(0), self._responses)
         # What an inverse transform over a slice starting at `first_bin` leaves to turn, in cycles per output sample.
         self._cycles = -((exact_bin - self._first_bin) / bins)
         within_hop = np.outer(self._cycles, np.arange(self.hop))

@@ -109,6 +109,13 @@ def test_bad_sources(capsys, source, rule):
         (["--capture", "x"], "must be a whole number"),
         (["--capture", "7"], "has captures 0 to 0"),
         (["--gain", "20"], "is for receivers"),
+        (["--volume", "-6"], "is for listening; add --listen"),
+        (["--output", "1"], "is for listening; add --listen"),
+        (["--listen", "--pace", "fast"], "goes at its own pace"),
+        (["--listen", "--volume", "loud"], "must be a number of dB"),
+        (["--listen", "--volume", "6"], "must lie between -80 and 0 dB"),
+        (["--listen", "nobody"], "no channel is named 'nobody'"),
+        (["--listen", "a/b/c"], "there are two ears"),
     ],
 )
 def test_bad_options(capsys, recording, options, rule):
