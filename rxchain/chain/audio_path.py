@@ -8,6 +8,7 @@ from collections.abc import Sequence
 import numpy as np
 
 from rxchain.audio.gain_control import GainControl, GainSettings
+from rxchain.audio.notch import ToneNotch
 from rxchain.audio.rate_conversion import RateConverter
 from rxchain.audio.squelch import Gate
 from rxchain.chain.channel_settings import AUTO, OFF, AutoOrLevel, ChannelSettings
@@ -18,7 +19,7 @@ _LEVEL_MEMORY_S = 0.3
 
 
 class AudioPath:
-    """Gain control, squelch gate and rate conversion of a group of channels.
+    """Notch, gain control, squelch gate and rate conversion of a group of channels.
 
     process(audio, open_steps) : float32, (channels, messages, n) and the squelch's decisions. Returns audio at
         ``rate_hz``, by default the channel's own where that is whole; with ``agc=off`` and ``squelch=off`` it is the
@@ -40,6 +41,9 @@ class AudioPath:
         always = np.array([channel.squelch_db == OFF for channel in channels])
         self.is_automatic: Bools = np.isnan(fixed_db)
         self._gain = GainControl(GainSettings(), fixed_db, n_messages, channel_rate_hz, live)
+        tones_hz = [_tone_hz(channel.notch_hz) for channel in channels]
+        is_notched = any(tone is not None for tone in tones_hz)
+        self._notch = ToneNotch(tones_hz, n_messages, channel_rate_hz) if is_notched else None
         self._gate = Gate(n, n_messages, squelch_step, channel_rate_hz, always)
         self.rate_hz = rate_hz or delivered_rate_hz(channel_rate_hz)
         self._converter = (
@@ -47,7 +51,8 @@ class AudioPath:
         )
         self._power = np.zeros((n, n_messages))
         self.tap: Tap | None = None
-        self.delay_samples = self._gain.delay_samples + (self._converter.delay_samples if self._converter else 0)
+        stages = (self._gain, self._notch, self._converter)
+        self.delay_samples = sum(stage.delay_samples for stage in stages if stage is not None)
 
     def tap_rows(self, rows: Sequence[int]) -> Tap:
         """From now on the ungated audio of these rows is kept as well."""
@@ -69,14 +74,17 @@ class AudioPath:
 
     def process(self, audio: FloatBlock, open_steps: Bools) -> FloatBlock:
         """Delivered audio as far as it is complete."""
-        levelled = self._gain.process(audio)
+        levelled = self._gain.process(audio if self._notch is None else self._notch.process(audio))
         if self.tap is not None:
             self.tap.take(levelled)
         return self._deliver(self._gate.process(levelled, open_steps))
 
     def flush(self, open_steps: Bools) -> FloatBlock:
         """The tail."""
+        rest = None if self._notch is None else self._gain.process(self._notch.flush())
         levelled = self._gain.flush()
+        if rest is not None:
+            levelled = np.concatenate([rest, levelled], axis=2)
         if self.tap is not None:
             self.tap.take(levelled)
             self.tap.finish()
@@ -96,6 +104,12 @@ def fixed_gain_db(agc: AutoOrLevel) -> float:
     if agc == AUTO:
         return float("nan")
     return 0.0 if agc == OFF else float(agc)
+
+
+def _tone_hz(notch: AutoOrLevel) -> float | None:
+    if notch == OFF:
+        return None
+    return float("nan") if notch == AUTO else float(notch)
 
 
 def delivered_rate_hz(channel_rate_hz: float) -> float:

@@ -43,6 +43,7 @@ class GroupKind:
     n_messages: int
     candidates: tuple[str, ...]
     logged: bool = False
+    notched: bool = False
 
 
 def kind_of(channel: ChannelSettings, plan: BankPlan) -> GroupKind:
@@ -60,6 +61,7 @@ def kind_of(channel: ChannelSettings, plan: BankPlan) -> GroupKind:
         n_messages=len(emission.messages),
         candidates=candidates_of(channel),
         logged=channel.log != OFF,
+        notched=channel.notch_hz != OFF,
     )
 
 

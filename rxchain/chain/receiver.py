@@ -11,7 +11,7 @@ import numpy as np
 from rxchain.carrier.track import Follow
 from rxchain.chain.auto_channels import AutoChannels
 from rxchain.chain.channel_group import ChannelGroup
-from rxchain.chain.channel_settings import ChannelSettings, as_emission
+from rxchain.chain.channel_settings import AUTO, OFF, ChannelSettings, as_emission
 from rxchain.chain.grouping import grouped
 from rxchain.chain.handover import FADE_S, Handover
 from rxchain.chain.status import ChannelStatus
@@ -22,6 +22,7 @@ from rxchain.meters.figures import Figures
 from rxchain.sources.protocol import SourceInfo
 from rxchain.streams import Block, Bools, ComplexBlock, FloatBlock, Floats, Reading
 from rxchain.tuning.channel_bank import ChannelBank
+from rxchain.tuning.impulse_blanker import AUTO_DB, ImpulseBlanker
 from rxchain.tuning.plan import plan_bank
 from rxchain.units import format_frequency
 
@@ -87,6 +88,7 @@ class Receiver:
                 self._at[place] = run.group, row
                 self._audio_rates[place] = run.group.audio_rate_hz
         self._auto = self._identifies(channels)
+        self._blanker = _blanker(channels, info.sample_rate_hz)
         self.samples = self.samples_lost = self.gaps = self.overloaded = 0
         self.losses: deque[tuple[float, float]] = deque(maxlen=_MOST_EVENTS)  # seconds: when, how much
         self.overloads: deque[tuple[float, int]] = deque(maxlen=_MOST_EVENTS)  # when, how many samples
@@ -139,7 +141,8 @@ class Receiver:
 
     def flush(self) -> list[ChannelAudio]:
         """The last of every channel's audio; each is as long as the stream."""
-        audio = self._delivered(self._bank.flush())
+        audio = [] if self._blanker is None else self._tuned(self._blanker.flush())
+        audio += self._delivered(self._bank.flush())
         for run in list(self._runs):
             audio += self._from_run(run, run.group.flush())
         for place, (handover, _, _) in self._handovers.items():
@@ -277,7 +280,15 @@ class Receiver:
         group = self._at[place][0]
         return next(run for run in self._runs if run.group is group)
 
+    @property
+    def blanked_fraction(self) -> float:
+        """Share of the samples that the impulse blanker cut out."""
+        return self._blanker.blanked / self.samples if self._blanker is not None and self.samples else 0.0
+
     def _through(self, iq: ComplexBlock) -> list[ChannelAudio]:
+        return self._tuned(iq if self._blanker is None else self._blanker.process(iq))
+
+    def _tuned(self, iq: ComplexBlock) -> list[ChannelAudio]:
         if self._auto is None:
             return self._delivered(self._bank.process(iq))
         # What is identified takes effect at the next batch, whatever the blocks are.
@@ -343,6 +354,14 @@ def messages_of(channel: ChannelSettings) -> tuple[str, ...]:
     if channel.emission.is_double_sideband and channel.sideband != "both":
         return (channel.sideband,)
     return channel.emission.messages
+
+
+def _blanker(channels: Sequence[ChannelSettings], rate_hz: float) -> ImpulseBlanker | None:
+    """One for the whole capture, where any channel asks for it; the most sensitive threshold counts."""
+    wanted = [channel.blanker_db for channel in channels if channel.blanker_db != OFF]
+    if not wanted:
+        return None
+    return ImpulseBlanker(rate_hz, min(AUTO_DB if one == AUTO else float(one) for one in wanted))
 
 
 def _check_inside(channel: ChannelSettings, info: SourceInfo) -> None:
