@@ -12,7 +12,7 @@ from rxchain.carrier.track import Follow
 from rxchain.chain.auto_channels import AutoChannels
 from rxchain.chain.channel_group import ChannelGroup
 from rxchain.chain.channel_settings import AUTO, OFF, ChannelSettings, as_emission
-from rxchain.chain.grouping import grouped
+from rxchain.chain.grouping import grouped, kind_of
 from rxchain.chain.handover import FADE_S, Handover
 from rxchain.chain.status import ChannelStatus
 from rxchain.emissions import Emission
@@ -31,7 +31,7 @@ _TREND_POINTS = 60
 _SPECTRUM_PARTS = 480
 _MOST_EVENTS = 100_000
 # How long a new group is left to find its carrier and its gain before it is heard.
-_SETTLES_S = 1.0
+_SETTLES_S, _SETTLES_BY_HAND_S = 1.0, 0.35
 _SETTLED_S = {Follow.SQUARE: 2.6, Follow.PILOT: 1.4}
 
 
@@ -80,6 +80,7 @@ class Receiver:
         self._bank = ChannelBank(self._plan, [])
         self._runs: list[_Run] = []
         self._at: dict[int, tuple[ChannelGroup, int]] = {}
+        self._next: dict[int, ChannelSettings] = {}
         self._handovers: dict[int, tuple[Handover, _Run, _Run]] = {}
         self._audio_rates: dict[int, float] = {}
         self._audio_samples = [0] * len(channels)
@@ -164,9 +165,21 @@ class Receiver:
         return taps
 
     def change(self, place: int, channel: ChannelSettings) -> None:
-        """Receives a channel in another way from the next batch on; its audio goes over without a click."""
+        """Receives a channel in another way from the next batch on; its audio goes over without a click.
+
+        Raises :class:`SettingError` where the channel cannot be received so; nothing changes then. While it is on its way
+        from an earlier change, the latest waits until it has arrived.
+        """
         _check_inside(channel, self.info)
-        self._change_all({place: channel})
+        kind_of(channel, self._plan)
+        if place in self._handovers:
+            self._next[place] = channel
+        else:
+            self._change_all({place: channel}, _SETTLES_BY_HAND_S)
+
+    def wanted(self, place: int) -> ChannelSettings:
+        """How a channel is to be received once all changes have been carried out."""
+        return self._next.get(place, self.channels[place])
 
     def figures(self, place: int) -> Figures:
         """A channel's figures since the start, as of the last :meth:`measure` with ``overall``."""
@@ -262,14 +275,15 @@ class Receiver:
                 started.append(run)
         return started
 
-    def _change_all(self, wanted: dict[int, ChannelSettings]) -> None:
+    def _change_all(self, wanted: dict[int, ChannelSettings], settles_s: float | None = None) -> None:
         """Each channel's audio is taken from its new group once that has settled; a change on the way ends at once."""
         wanted = {place: channel for place, channel in wanted.items() if place not in self._handovers}
         old_runs = {place: self._run_of(place) for place in wanted}
         for run in self._start(wanted):
             group, rate_hz = run.group, run.group.audio_rate_hz
             first = round(group.first_index * rate_hz / group.rate_hz)
-            settled = first + round(_SETTLED_S.get(group.kind.follow, _SETTLES_S) * rate_hz)
+            wait_s = settles_s or _SETTLED_S.get(group.kind.follow, _SETTLES_S)
+            settled = first + round(wait_s * rate_hz)
             for place in run.places:
                 handover = Handover(self._audio_samples[place], first, settled, round(FADE_S * rate_hz))
                 self._handovers[place] = handover, old_runs[place], run
@@ -307,13 +321,18 @@ class Receiver:
         if self._auto is not None and len(blocks) and blocks[-1].shape[1]:
             self._take_up(self._auto.process(blocks[-1]))
         self._drop_idle()
+        self._change_waiting()
         return audio
+
+    def _change_waiting(self) -> None:
+        for place in [place for place in self._next if place not in self._handovers]:
+            self._change_all({place: self._next.pop(place)}, _SETTLES_BY_HAND_S)
 
     def _take_up(self, known: list[tuple[int, Emission]]) -> None:
         changed = {
             place: as_emission(self.channels[place], emission)
             for place, emission in known
-            if emission is not self.channels[place].emission
+            if emission is not self.channels[place].emission and not self.channels[place].emission_given
         }
         if changed:
             self._change_all(changed)

@@ -22,11 +22,13 @@ import numpy as np
 
 from rxchain.chain.centre_choice import centre_beside, channels_on_spike
 from rxchain.chain.channel_settings import OFF, ChannelSettings
+from rxchain.chain.commands import Commands
 from rxchain.chain.receiver import Receiver
 from rxchain.chain.runner import Runner, span_text
 from rxchain.chain.station import check_names
 from rxchain.cli.listen_options import Listen, live_where_heard, open_listening
 from rxchain.cli.main import one_line
+from rxchain.cli.operator import Operator
 from rxchain.cli.source_options import parsed_options
 from rxchain.dashboard.display import Display, make_display
 from rxchain.errors import FaultError, SettingError
@@ -95,7 +97,8 @@ def receive(request: Request) -> Result:
         raise
     if is_live or live_pace:
         sys.setswitchinterval(1e-4)  # the display must not hold the numeric thread up for 5 ms at a time
-    display: Display = make_display(quiet=request.quiet)
+    commands = Commands()
+    display: Display = make_display(quiet=request.quiet, operations=Operator(commands, receiver, listening, log))
     watched = source if isinstance(source, Watched) else None
     runner = Runner(
         source,
@@ -106,6 +109,7 @@ def receive(request: Request) -> Result:
         (lambda: watched.health) if watched else SourceHealth,
         listening.status if listening else lambda: None,
         log.after_block if log is not None else lambda: None,
+        commands,
     )
 
     def stop_all() -> None:
