@@ -156,13 +156,7 @@ def _station_log(folder: Path, receiver: Receiver) -> StationLog:
 
 
 def _receiver_options(options: dict[str, Any], channels: tuple[ChannelSettings, ...]) -> dict[str, Any]:
-    """A receiver's options with what follows from the channels, and warnings of what may be regretted."""
-    if options.get("bias_voltage"):
-        print(
-            "rxchain: bias voltage on: about 4.5 V on the antenna line, which harms what is not made for it; "
-            "it goes off when this run ends",
-            file=sys.stderr,
-        )
+    """A receiver's options with what follows from the channels; says so where the spike lies in one."""
     rate_hz = options.get("rate_hz")
     if rate_hz is None:
         return options

@@ -3,10 +3,16 @@
 from __future__ import annotations
 
 import argparse
+import sys
 from collections.abc import Mapping
 from typing import Any
 
 _KEYS = ("rate", "centre", "capture", "gain", "ppm", "direct_sampling", "bias_voltage")
+
+_BIAS_WARNING = (
+    "rxchain: bias voltage on: about 4.5 V on the antenna line, which harms what is not made for it; "
+    "it goes off when this run ends"
+)
 
 
 def add_source_arguments(parser: argparse.ArgumentParser) -> None:
@@ -44,7 +50,7 @@ def given_options(arguments: Mapping[str, Any]) -> dict[str, str]:
 
 
 def parsed_options(options: dict[str, str]) -> dict[str, Any]:
-    """The source's keys as numbers."""
+    """The source's keys as numbers; a warning is printed of what can do harm."""
     from rxchain.errors import SettingError
     from rxchain.units import parse_frequency_hz
 
@@ -68,6 +74,8 @@ def parsed_options(options: dict[str, str]) -> dict[str, Any]:
         if options["bias_voltage"] not in ("on", "off"):
             raise SettingError("bias_voltage", options["bias_voltage"], "must be on or off")
         parsed["bias_voltage"] = options["bias_voltage"] == "on"
+        if parsed["bias_voltage"]:
+            print(_BIAS_WARNING, file=sys.stderr)
     if "direct_sampling" in options:
         parsed["direct_sampling"] = options["direct_sampling"]
     return parsed

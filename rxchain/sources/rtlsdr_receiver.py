@@ -47,13 +47,13 @@ class _Buffer:
 
 
 class RtlsdrReceiver:
-    """A stream from the receiver with that serial number or index, or from the first."""
+    """A stream from the receiver with that serial number or index, or from the first; ``serial`` tells which it is."""
 
     def __init__(self, wanted: str | None, settings: ReceiverSettings, clock: Callable[[], float] = time.monotonic):
         settings.check()
         self._settings, self._clock = settings, clock
         self._device = Device(wanted, settings)
-        self._serial = self._device.serial
+        self.serial = self._device.serial
         name = f"rtlsdr:{wanted}" if wanted else "rtlsdr"
         rate_hz = self._device.rate_hz
         centre_hz = self._device.true_centre_hz(settings.centre_hz)
@@ -218,7 +218,7 @@ class RtlsdrReceiver:
                 raise SourceLost(f"{self._info.name}: the receiver is gone: {reason}")
             if now_s >= next_s:
                 try:
-                    self._device = Device(self._serial, self._settings)
+                    self._device = Device(self.serial, self._settings)
                     if self._gain_db is not None:
                         self._device.set_gain_db(self._gain_db)
                 except (SourceError, Refusal) as error:

@@ -9,6 +9,8 @@
  *   STANDIN_PACED     1: buffers come at the rate that was set; STANDIN_LOOPS 1: the file begins again
  *   STANDIN_FAULTS    what happens at which buffer, counted since the process began: "unplug@N:CODE drop@N:BUFFERS
  *                     stall@N:MS hang@N:0 short@N:0"
+ *   STANDIN_MARKS     file that is told when the buffer with the file's first bytes is delivered (monotonic clock), and how
+ *                     many of the file's bytes were delivered with it
  *   STANDIN_REFUSES   frequency that the tuner refuses, in hertz
  *   STANDIN_OPEN      code that opening returns with, 0 if left out
  *   STANDIN_DEVICES   how many devices there are, 1 if left out
@@ -118,7 +120,7 @@ static long fault(const char *name, long n) {
 
 CALL int rtlsdr_read_async(device_t *device, callback_t callback, void *context, uint32_t count, uint32_t length) {
     const char *path = getenv("STANDIN_FILE"), *end = getenv("STANDIN_END");
-    FILE *file = path ? fopen(path, "rb") : NULL;
+    FILE *file = path ? fopen(path, "rb") : NULL, *marks = getenv("STANDIN_MARKS") ? fopen(getenv("STANDIN_MARKS"), "a") : NULL;
     unsigned char *buffer = malloc(length);
     int half = number("STANDIN_SHORT", -1), paced = number("STANDIN_PACED", 0), loops = number("STANDIN_LOOPS", 0);
     double start = now(), made = 0.0; /* seconds of samples that the receiver has made since the start */
@@ -132,6 +134,11 @@ CALL int rtlsdr_read_async(device_t *device, callback_t callback, void *context,
             got += fread(buffer + got, 1, length - got, file);
         }
         if (!got) break;
+        if (marks && ftell(file) <= (long)length) { /* the buffer in which the file begins (again) */
+            while (paced && !device->cancelled && now() - start < made + (double)length / 2 / device->rate) usleep(200);
+            fprintf(marks, "%.6f %ld\n", now(), ftell(file));
+            fflush(marks);
+        }
         made += (double)length / 2 / device->rate;
         while (paced && !device->cancelled && now() - start < made) usleep(500);
         if (paced && now() - start > made + (double)count * length / 2 / device->rate) {
@@ -161,6 +168,7 @@ CALL int rtlsdr_read_async(device_t *device, callback_t callback, void *context,
         delivered++;
     }
     if (file) fclose(file);
+    if (marks) fclose(marks);
     while (end && !strcmp(end, "hang") && !device->cancelled) usleep(1000);
     free(buffer);
     device->running = 0;
