@@ -148,7 +148,7 @@ def build(folder: Path) -> None:
         else:
             message[:] = 0.6 * np.sin(2 * np.pi * (400.0 + 100.0 * k) * t)
         cycles = np.round(offset_hz * PASS_S) / PASS_S * t  # a whole number in a pass, so that nothing jumps
-        iq += (0.04 if k else 0.08) * ((1 + message) * np.exp(2j * np.pi * (cycles % 1.0))).astype(np.complex64)
+        iq += (0.025 if k else 0.06) * ((1 + message) * np.exp(2j * np.pi * (cycles % 1.0))).astype(np.complex64)
     components = iq.view(np.float32) * 127.5 + 127.5
     (folder / "capture.cu8").write_bytes(np.clip(np.round(components), 0, 255).astype(np.uint8).tobytes())
 

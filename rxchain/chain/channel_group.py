@@ -10,6 +10,7 @@ import numpy as np
 from rxchain.audio.squelch import Squelch
 from rxchain.carrier.fallback import FallbackFollower
 from rxchain.carrier.follower import CarrierFollower, Follower, FollowerSettings, make_follower
+from rxchain.carrier.nominal import NominalFollower
 from rxchain.carrier.speech_aligner import SpeechAligner
 from rxchain.carrier.track import Follow, Lock, Turned
 from rxchain.chain.audio_path import AudioPath
@@ -49,6 +50,8 @@ class ChannelGroup:
         # A channel turned away from its middle takes the bank's slopes with it.
         usable_hz = plan.usable_hz(kind.bins) - max(largest_shift_hz(channel) for channel in channels)
         self._follower = _follower(kind, channels, self.rate_hz)
+        # An envelope needs no carrier: with short delay it doesn't wait for the follower, which serves the figures alone.
+        self._direct = NominalFollower(len(channels), self.rate_hz) if kind.envelope_only and kind.live else None
         self._meters = GroupMeters([_metered(channel) for channel in channels], self.rate_hz, usable_hz)
         thresholds_db = [channel.squelch_db for channel in channels]
         self._squelch = Squelch(
@@ -74,18 +77,23 @@ class ChannelGroup:
     @property
     def delay_s(self) -> float:
         """How far the audio runs behind the channel's I/Q while streaming, apart from waits for full hops."""
-        samples = self._follower.delay_samples + self._detectors.delay_samples + self._audio.delay_samples
+        turning = self._follower if self._direct is None else self._direct
+        samples = turning.delay_samples + self._detectors.delay_samples + self._audio.delay_samples
         return samples / self.rate_hz
 
     def process(self, iq: ComplexBlock) -> FloatBlock:
         """Audio as far as it is complete."""
         turned = self._follower.process(iq)
-        return self._audio.process(self._detected(turned), self._opened(turned.iq))
+        self._measure(turned)
+        heard = turned if self._direct is None else self._direct.process(iq)
+        return self._audio.process(self._detected(heard), self._opened(heard.iq))
 
     def flush(self) -> FloatBlock:
         """The tail: as much audio in all as the channels' I/Q was long."""
         turned = self._follower.flush()
-        audio = [self._audio.process(self._detected(turned), self._opened(turned.iq))]
+        self._measure(turned)
+        heard = turned if self._direct is None else self._direct.flush()
+        audio = [self._audio.process(self._detected(heard), self._opened(heard.iq))]
         audio.append(self._audio.process(self._detectors.flush(), self._squelch.flush()))
         audio.append(self._audio.flush(np.zeros((len(self.channels), 0), bool)))
         return np.concatenate(audio, axis=2)
@@ -148,7 +156,7 @@ class ChannelGroup:
                 return "coherent", "no pilot: followed by the messages; which is which, and their signs, are not known"
         return self._detectors.in_words(row, was_locked)
 
-    def _detected(self, turned: Turned) -> FloatBlock:
+    def _measure(self, turned: Turned) -> None:
         lock = turned.track.lock
         if lock.shape[1]:
             locked = lock == Lock.LOCKED
@@ -160,6 +168,8 @@ class ChannelGroup:
             self._hop_samples = turned.hop_samples
             self._lock_now = lock[:, -1]
         self._meters.process(turned)
+
+    def _detected(self, turned: Turned) -> FloatBlock:
         upright = sum_and_difference(turned.iq) if self.kind.stereo else turned.iq
         return self._detectors.process(turned, upright)
 
