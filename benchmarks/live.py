@@ -107,7 +107,8 @@ def table(rows: list[dict], file_share: float) -> list[str]:
         "",
         "`python benchmarks/live.py`: stand-in for the USB driver at 2.4 MS/s, 20 A3E channels (meters, gain control,",
         "squelch, files), one heard through PortAudio into a sound server without a card, dashboard on a terminal of",
-        f"100x30. {os.cpu_count()} cores, shared with other work.",
+        f"100x30. {os.cpu_count()} cores, shared with other work that kept {os.getloadavg()[2]:.0f} more processes waiting for",
+        f"them (load average of 15 minutes); the program ran at nice {os.nice(0)} so as to get its share all the same.",
         "",
         "| heard through | seconds | samples lost | buffers late | underruns, skips | delay inside, median (largest) | "
         "delay outside, median (largest) | wanted | CPU |",

@@ -88,3 +88,19 @@ def amplitude_from_db(level_db: float) -> float:
     10.0
     """
     return math.pow(10.0, level_db / 20.0)
+
+
+_BYTES = {"": 1, "k": 10**3, "M": 10**6, "G": 10**9, "T": 10**12}
+_SIZE = re.compile(r"(\d+(?:\.\d+)?)\s*([kMGT]?)B?")
+
+
+def parse_bytes(text: str, name: str = "size") -> int:
+    """An amount of storage in bytes; kB, MB, GB and TB are powers of ten.
+
+    >>> parse_bytes("1.5GB")
+    1500000000
+    """
+    match = _SIZE.fullmatch(text.strip())
+    if not match:
+        raise SettingError(name, text, "must be an amount of storage", "write it like 20GB")
+    return round(float(match[1]) * _BYTES[match[2]])

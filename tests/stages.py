@@ -10,6 +10,7 @@ import numpy as np
 
 from rxchain.audio.gain_control import GainControl, GainSettings
 from rxchain.audio.limiter import Limiter
+from rxchain.audio.notch import ToneNotch
 from rxchain.audio.rate_conversion import RateConverter
 from rxchain.audio.squelch import Gate, Squelch
 from rxchain.carrier.fallback import FallbackFollower
@@ -152,6 +153,10 @@ STAGES: dict[str, Entry] = {
         )
         for times in (1, 2, 4)
     },
+    "notch": Entry(
+        lambda c: ToneNotch([np.nan, 1_000.0, None][:c] + [np.nan] * max(0, c - 3), 2, RATE_HZ), audio, np.float32, np.float32,
+        alone=lambda k: ToneNotch([[np.nan, 1_000.0, None][k]], 2, RATE_HZ),
+    ),
     "automatic gain": Entry(
         lambda c: GainControl(GainSettings(), np.full(c, np.nan), 2, RATE_HZ), audio, np.float32, np.float32
     ),

@@ -3,8 +3,8 @@
 Two statistics of spectra averaged over about 50 ms, both blind to the level of the noise: the density within the
 emission's own band over that of the quiet neighbourhood, and the unevenness of the band itself (the logarithm of the
 mean less the mean of the logarithms: 0 for flat noise at infinite averaging, large for lines and for speech). Either
-opens; it closes a second after both have fallen. A step of the noise of 6 dB or less moves neither; one of 20 dB mostly
-opens it for that second, because the first loud frame outweighs the three averaged with it.
+opens; it closes a second after both have fallen. Each spectrum is scaled by its own level (that of the neighbourhood where
+there is one) before it is averaged, so that a step of the noise moves neither: no frame outweighs the others.
 """
 
 from __future__ import annotations
@@ -23,6 +23,7 @@ UNEVEN_OPEN = 0.36
 _HANG_S = 1.0
 _LEAST_NEIGHBOURHOOD_HZ = 3_000.0
 _GUARD_HZ = 150.0
+_SILENCE = np.float32(1e-28)  # power a bin below which there is nothing at all
 
 
 class Squelch:
@@ -45,6 +46,7 @@ class Squelch:
         usable = np.abs(frequency_hz) <= usable_hz
         self._inside = np.zeros((n, self._frame), np.float32)
         self._outside = np.zeros((n, self._frame), np.float32)
+        self._level = np.zeros((n, self._frame), np.float32)
         for row, bands in enumerate(in_band_hz):
             inside = np.zeros(self._frame, bool)
             near = np.zeros(self._frame, bool)
@@ -53,8 +55,10 @@ class Squelch:
                 near |= (frequency_hz >= low_hz - _GUARD_HZ) & (frequency_hz <= high_hz + _GUARD_HZ)
             self._inside[row] = (inside & usable) / max(1, (inside & usable).sum())
             outside = usable & ~near
+            self._level[row] = usable / usable.sum()
             if outside.sum() * rate_hz / self._frame >= _LEAST_NEIGHBOURHOOD_HZ:
                 self._outside[row] = outside / outside.sum()
+                self._level[row] = self._outside[row]
         self._has_neighbourhood = self._outside.any(axis=1)
         self._thresholds_db = thresholds_db
         self._window = np.hanning(self._frame + 1)[:-1].astype(np.float32)
@@ -67,6 +71,7 @@ class Squelch:
         n = len(self._inside)
         self._windows.reset()
         self._recent = np.zeros((_AVERAGED, n, self._frame), np.float32)
+        self._sounds = np.zeros((_AVERAGED, n), bool)
         self._frames = 0
         self._received = 0
         self._shut_for = np.full(n, self._hang, np.int64)
@@ -91,6 +96,9 @@ class Squelch:
         slot = self._recent[self._frames % _AVERAGED]
         np.square(spectrum.real, out=slot)
         slot += np.square(spectrum.imag)
+        level = np.einsum("cf,cf->c", slot, self._level)
+        slot *= (1.0 / np.maximum(level, _SILENCE))[:, None]
+        self._sounds[self._frames % _AVERAGED] = level > _SILENCE
         self._frames += 1
         mean = self._recent[0] + self._recent[1]
         mean += self._recent[2]
@@ -105,7 +113,9 @@ class Squelch:
         snr = np.where(self._has_neighbourhood, inside / (outside + 1e-30) - 1.0, np.inf)
         asked = 10.0 * np.log10(np.maximum(snr, 1e-9)) > self._thresholds_db
         heard = (
-            np.where(np.isnan(self._thresholds_db), automatic, asked) & (self._frames >= _AVERAGED) & (inside > 1e-28)
+            np.where(np.isnan(self._thresholds_db), automatic, asked)
+            & (self._frames >= _AVERAGED)
+            & self._sounds.any(axis=0)
         )
         self._shut_for = np.where(heard, 0, self._shut_for + 1)
         return np.asarray(self._shut_for < self._hang)

@@ -13,6 +13,8 @@ from rxchain.carrier.phasor import unit_phasor
 from rxchain.streams import Bools, Floats
 
 _LAG_MEMORY_S = 0.3
+_NARROW_HOPS = 6  # after the middle of the narrow window
+_FALLEN, _FALLEN_S = 1e-3, 0.15  # a line so much weaker for so long: what it was before tells nothing any more
 _COHERENT = 2.0  # lag product over noise power: noise alone gives its correlation, 0.5 to 0.9
 _WRONG_HZ = 1.0
 _ASTRAY_CYCLES = 0.5  # half a second at 1 Hz, less at more
@@ -28,8 +30,9 @@ class MotionWatch:
     fast : bool, (channels,): whether the line fades too fast for the frequency filter.
     """
 
-    def __init__(self, n_channels: int, hops: int, hop_s: float, fast_fading: bool) -> None:
+    def __init__(self, n_channels: int, lag: int, hops: int, hop_s: float, fast_fading: bool) -> None:
         quantum_s = hops * hop_s
+        self._blind_s = (lag + _NARROW_HOPS) * hop_s
         self._hop_s = hop_s
         self._quantum_s = quantum_s
         self._fast_fading = fast_fading
@@ -40,6 +43,8 @@ class MotionWatch:
         self._slow_product = np.zeros(n_channels, np.complex128)
         self._slow_size: Floats = np.zeros(n_channels)
         self._astray: Floats = np.zeros(n_channels)
+        self._fallen_s: Floats = np.zeros(n_channels)
+        self._since_shift_s: Floats = np.full(n_channels, np.inf)
         self.lag_hz: Floats = np.zeros(n_channels)
         self.fast: Bools = np.zeros(n_channels, np.bool_)
 
@@ -47,8 +52,9 @@ class MotionWatch:
         """A new line."""
         for state in (self._last, self._product, self._slow_product):
             state[channel] = 0.0
-        for figure in (self._slow_size, self._astray, self.lag_hz):
+        for figure in (self._slow_size, self._astray, self._fallen_s, self.lag_hz):
             figure[channel] = 0.0
+        self._since_shift_s[channel] = np.inf
         self.fast[channel] = False
 
     def watch(self, line: NDArray[np.complex128], noise: Floats, active: Bools) -> Bools:
@@ -59,7 +65,9 @@ class MotionWatch:
         """
         earlier = np.concatenate([self._last[:, None], line[:, :-1]], axis=1)
         product = np.mean(line * earlier.conj(), axis=1)
-        self._product += self._gain * (product - self._product)
+        fallen = np.abs(product) < _FALLEN * np.abs(self._product)
+        self._fallen_s = np.where(fallen, self._fallen_s + self._quantum_s, 0.0)
+        self._product += np.where(self._fallen_s > _FALLEN_S, 1.0, self._gain) * (product - self._product)
         self.lag_hz = np.angle(self._product) / (2.0 * np.pi * self._hop_s)
         if self._fast_fading:
             # Less the mean frequency: a line that drifts away is no fading.
@@ -68,11 +76,14 @@ class MotionWatch:
         self._last = line[:, -1]
         coherent = np.minimum(np.abs(self._product), np.abs(product)) > _COHERENT * noise
         wrong_hz = np.abs(self.lag_hz)
-        wrong = active & coherent & (wrong_hz > _WRONG_HZ) & ~self.fast
+        # What a shift has changed shows only once it has come through the look-ahead.
+        self._since_shift_s += self._quantum_s
+        seeing = self._since_shift_s > self._blind_s
+        wrong = active & coherent & (wrong_hz > _WRONG_HZ) & ~self.fast & seeing
         self._astray = np.where(wrong, self._astray + wrong_hz * self._quantum_s, 0.0)
         shift = self._astray > _ASTRAY_CYCLES
-        self._astray[shift] = 0.0
-        self._product[shift] = 0.0
+        self._astray[shift] = self._since_shift_s[shift] = 0.0
+        self._product[shift | ~seeing] = 0.0
         return shift
 
     def _measure_spread(self, product: NDArray[np.complex128], noise: Floats, active: Bools) -> None:

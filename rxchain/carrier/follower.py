@@ -22,6 +22,7 @@ import numpy as np
 
 from rxchain.carrier.acquisition import Acquisition, Found
 from rxchain.carrier.block_sums import BlockSums
+from rxchain.carrier.burst_guard import BurstGuard, without_nonsense
 from rxchain.carrier.derotation import derotate
 from rxchain.carrier.fading import MotionWatch
 from rxchain.carrier.frequency_filter import FrequencyFilter
@@ -148,8 +149,9 @@ class CarrierFollower:
         self._contest = WindowContest(n, recipe.half_lengths, self._lag, quantum, hop_s, self._sums.overlap_correlation)
         self._noise = QuadratureNoise(n, recipe.span_hops, quantum, hop_s, recipe.hold_s)
         self._hold = PhaseHold(n, recipe.hold_weight)
+        self._guard = BurstGuard(n, quantum, hop_s, recipe.burst_ratio)
         self._watch = LockWatch(n, self._lag, quantum, hop_s, recipe.confirm_s)
-        self._motion = MotionWatch(n, quantum, hop_s, recipe.fast_fading)
+        self._motion = MotionWatch(n, self._lag, quantum, hop_s, recipe.fast_fading)
         self._band = MessageBand(
             n, self._rate_hz, self.hop_samples, quantum, self.settings.message_hz[1], self.settings.search_hz
         )
@@ -189,7 +191,7 @@ class CarrierFollower:
     def _advance(self, block: ComplexBlock) -> Turned | None:
         recipe, hop = self._recipe, self.hop_samples
         self._quanta += 1
-        self._samples.push(block)
+        self._samples.push(without_nonsense(np.ascontiguousarray(block)))
         if recipe.power > 1:
             known = self._watch.active & self._watch.confirmed
             self._band.retune(self._filter.frequency_hz / recipe.power, known)
@@ -200,7 +202,7 @@ class CarrierFollower:
             self._search()
         self._sums.retune(self._filter.frequency_hz)
         sums = self._sums.sums(self._line.latest(self._quantum + (recipe.span_hops - 1) * hop))
-        self._push_blocks(sums)
+        self._push_blocks(self._guard.guard(sums, self._level))
         smoothed = self._contest.smooth(
             self._blocks.latest(self._contest.length), self._noise.power, self._watch.followed_s
         )
@@ -259,6 +261,7 @@ class CarrierFollower:
         for part in (self._contest, self._hold, self._watch, self._motion, self._takeover):
             part.start(channel)
         self._level[channel] = float(np.abs(mean))
+        self._guard.start(channel, self._level[channel])
 
     def _turn(self, smoothed: Smoothed) -> Turned | None:
         hops, power = HOPS_A_QUANTUM, self._recipe.power

@@ -52,6 +52,8 @@ class Recipe:
     confirm_s : a line taken up is dropped unless confirmed within this time.
     hold_weight : weight of the phase held from before, in noise amplitudes of the smoother.
     hold_s : how slowly the noise behind ``hold_weight`` may fall, seconds for a factor e.
+    burst_ratio : a block sum this far over the line's strength, in amplitude, is a burst. A voice's loudest moments have ten
+        times its mean power, which is what the line of a square is made of.
     fast_fading : give the frequency to the lag product where the measured Doppler spread asks for it.
     """
 
@@ -66,6 +68,7 @@ class Recipe:
     hold_weight: float
     hold_s: float
     fast_fading: bool
+    burst_ratio: float
 
 
 _LONG = ((5, 5), (11, 11), (24, 24), (24, 72), (24, 200))
@@ -83,6 +86,7 @@ RECIPES: dict[Follow, Recipe] = {
         hold_weight=1.5,
         hold_s=1.0,
         fast_fading=True,
+        burst_ratio=10.0,
     ),
     # A voice's harmonics can stand still for half a second, hence the higher contrast for the shorter average.
     Follow.PILOT: Recipe(
@@ -97,6 +101,7 @@ RECIPES: dict[Follow, Recipe] = {
         hold_weight=1.5,
         hold_s=1.0,
         fast_fading=True,
+        burst_ratio=10.0,
     ),
     # The line comes and goes with the voice: long averages, patience before it is dropped, a firm hold in pauses.
     Follow.SQUARE: Recipe(
@@ -111,6 +116,7 @@ RECIPES: dict[Follow, Recipe] = {
         hold_weight=4.0,
         hold_s=6.0,
         fast_fading=False,
+        burst_ratio=30.0,
     ),
     # The messages are noise to this line: only the long windows average enough of them.
     Follow.FOURTH_POWER: Recipe(
@@ -125,5 +131,6 @@ RECIPES: dict[Follow, Recipe] = {
         hold_weight=4.0,
         hold_s=6.0,
         fast_fading=False,
+        burst_ratio=30.0,
     ),
 }

@@ -16,6 +16,7 @@ from rxchain.carrier.track import Follow, Lock, Turned
 from rxchain.chain.audio_path import AudioPath
 from rxchain.chain.channel_settings import AUTO, OFF, ChannelSettings
 from rxchain.chain.detector_set import DetectorSet
+from rxchain.chain.group_tap import GroupTap, TappedGroup
 from rxchain.chain.grouping import GroupKind, largest_shift_hz
 from rxchain.detectors.stereo import sum_and_difference
 from rxchain.emissions import Side
@@ -25,6 +26,7 @@ from rxchain.streams import Bools, ComplexBlock, FloatBlock, Floats
 from rxchain.tuning.plan import BankPlan
 
 _PILOT_SHARE, _LEAST_SEARCH_HZ = 0.8, 60.0
+_HISTORY_S = 660.0  # of a logged group's meters: the longest transmission, and some
 
 
 class ChannelGroup:
@@ -52,7 +54,8 @@ class ChannelGroup:
         self._follower = _follower(kind, channels, self.rate_hz)
         # An envelope needs no carrier: with short delay it doesn't wait for the follower, which serves the figures alone.
         self._direct = NominalFollower(len(channels), self.rate_hz) if kind.envelope_only and kind.live else None
-        self._meters = GroupMeters([_metered(channel) for channel in channels], self.rate_hz, usable_hz)
+        history_s = _HISTORY_S if kind.logged else 0.0
+        self._meters = GroupMeters([_metered(channel) for channel in channels], self.rate_hz, usable_hz, history_s)
         thresholds_db = [channel.squelch_db for channel in channels]
         self._squelch = Squelch(
             [_occupied(channel) for channel in channels],
@@ -65,6 +68,7 @@ class ChannelGroup:
             channels, kind.n_messages, self._squelch.step_samples, self.rate_hz, kind.live, audio_rate_hz
         )
         self.audio_rate_hz = self._audio.rate_hz
+        self._tap = GroupTap(self._audio.tap_rows(range(len(channels)))) if kind.logged else None
         n = len(channels)
         self._locked_hops = np.zeros(n, np.int64)
         self._first_lock_hop = np.full(n, -1, np.int64)
@@ -83,6 +87,8 @@ class ChannelGroup:
 
     def process(self, iq: ComplexBlock) -> FloatBlock:
         """Audio as far as it is complete."""
+        if self._tap is not None:
+            self._tap.iq.append(iq)
         turned = self._follower.process(iq)
         self._measure(turned)
         heard = turned if self._direct is None else self._direct.process(iq)
@@ -94,7 +100,7 @@ class ChannelGroup:
         self._measure(turned)
         heard = turned if self._direct is None else self._direct.flush()
         audio = [self._audio.process(self._detected(heard), self._opened(heard.iq))]
-        audio.append(self._audio.process(self._detectors.flush(), self._squelch.flush()))
+        audio.append(self._audio.process(self._detectors.flush(), self._tapped_steps(self._squelch.flush())))
         audio.append(self._audio.flush(np.zeros((len(self.channels), 0), bool)))
         return np.concatenate(audio, axis=2)
 
@@ -102,6 +108,23 @@ class ChannelGroup:
         """A stretch of the stream was lost: its samples are zeros and count in no figure."""
         first = int(np.floor(first_s * self.rate_hz)) - self.first_index
         self._meters.mark_lost(first, int(np.ceil(duration_s * self.rate_hz)) + 1)
+
+    def take_tap(self) -> TappedGroup | None:
+        """What a logbook needs, since the last time: I/Q, decisions, ungated audio; None where no channel is logged."""
+        return None if self._tap is None else self._tap.take()
+
+    @property
+    def squelch_step_s(self) -> float:
+        """Length of one decision of the squelch."""
+        return self._squelch.step_samples / self.rate_hz
+
+    def figures_between(self, first_s: float, last_s: float) -> list[Figures]:
+        """Figures of a stretch of time, seconds of the group's own stream, within the last ten minutes."""
+        return self._meters.between(first_s, last_s)
+
+    def levels_db(self, first_s: float, last_s: float) -> Floats:
+        """Level of each quarter second of a stretch of time, (channels, n)."""
+        return self._meters.levels_db(first_s, last_s)
 
     def recent_figures(self) -> list[Figures]:
         """Figures of each channel over the last seconds."""
@@ -156,6 +179,13 @@ class ChannelGroup:
                 return "coherent", "no pilot: followed by the messages; which is which, and their signs, are not known"
         return self._detectors.in_words(row, was_locked)
 
+    def detector_at(self, row: int, seconds: float) -> tuple[str, str]:
+        """The same at a time, seconds of the group's own stream."""
+        if isinstance(self._follower, FallbackFollower):
+            return self.detector(row)
+        locked = self.locked_fraction(row)
+        return self._detectors.in_words_at(row, seconds, locked is not None and locked > 0.0)
+
     def _measure(self, turned: Turned) -> None:
         lock = turned.track.lock
         if lock.shape[1]:
@@ -177,6 +207,11 @@ class ChannelGroup:
         steps = self._squelch.process(iq)
         if steps.shape[1]:
             self._open_now = steps[:, -1] | self._always_open
+        return self._tapped_steps(steps)
+
+    def _tapped_steps(self, steps: Bools) -> Bools:
+        if self._tap is not None:
+            self._tap.steps.append(steps)
         return steps
 
 

@@ -21,9 +21,11 @@ AutoOrLevel: TypeAlias = "Literal['auto', 'off'] | float"
 DETECTORS = (AUTO, "envelope", "rectifier", "coherent")
 SIDEBANDS = ("both", "upper", "lower", "better")
 DELAYS = ("full", "live")
+DEEMPHASES = (OFF, "nrsc")
+LOGS = (OFF, "transmissions", "all")
 SLOPES = ("sent", "received")
 _FIRST_TRY = EMISSIONS["A3E"]
-_KEYS_OF_ANY = ("frequency", "emission", "name", "audio", "delay", "agc", "squelch")
+_KEYS_OF_ANY = ("frequency", "emission", "name", "audio", "delay", "agc", "squelch", "notch", "blanker", "log")
 _NAME = re.compile(r"[A-Za-z0-9_][A-Za-z0-9._+-]{0,63}")
 _DB = re.compile(r"([+-]?\d+(?:\.\d+)?)\s*dB", re.IGNORECASE)
 
@@ -36,6 +38,9 @@ class ChannelSettings:
         voice instead.
     transmit_response : measured gain of a vestigial transmitter: frequencies from the carrier in hertz, positive on the
         side sent whole, and gains; None where a straight slope is assumed.
+    notch_hz : ``off``, ``auto`` (finds steady tones) or the frequency of one; deemphasis : ``off`` or ``nrsc``.
+    blanker_db : ``off``, ``auto`` or the level over the median from which a sample of the capture is an impulse.
+    log : ``off``, ``transmissions`` or ``all``: what the logbook keeps of the channel.
     delay : ``auto`` is ``live`` for a channel that is heard and ``full`` for others.
     emission_given : whether the emission is the user's word; where not, it is a first try, to be identified.
     audio_given : likewise the audio band.
@@ -57,6 +62,10 @@ class ChannelSettings:
     transmit_response: tuple[tuple[float, ...], tuple[float, ...]] | None = None
     agc_db: AutoOrLevel = AUTO
     squelch_db: AutoOrLevel = AUTO
+    notch_hz: AutoOrLevel = OFF
+    deemphasis: str = OFF
+    blanker_db: AutoOrLevel = OFF
+    log: str = OFF
     emission_given: bool = True
     audio_given: bool = False
 
@@ -124,6 +133,10 @@ def channel_from_table(table: Mapping[str, object], folder: Path = Path()) -> Ch
         transmit_response=response,
         agc_db=_auto_or_level("agc", values.get("agc", AUTO)),
         squelch_db=_auto_or_level("squelch", values.get("squelch", AUTO)),
+        notch_hz=_notch(values.get("notch", OFF)),
+        deemphasis=_one_of("deemphasis", values.get("deemphasis", OFF), DEEMPHASES),
+        blanker_db=_auto_or_level("blanker", values.get("blanker", OFF)),
+        log=_one_of("log", values.get("log", OFF), LOGS),
         emission_given=emission_given,
         audio_given="audio" in values,
     )
@@ -187,14 +200,6 @@ def _auto_or_level(key: str, value: str) -> AutoOrLevel:
     if not match:
         raise SettingError(key, value, "auto, off, or a level in dB", f"write it like {key}=6dB")
     return float(match[1])
-
-
-def _only_off(key: str) -> Callable[[str, ChannelSettings], None]:
-    def check(value: str, _: ChannelSettings) -> None:
-        if value != OFF:
-            raise SettingError(key, value, "only off is offered")
-
-    return check
 
 
 def _slope(
@@ -264,6 +269,37 @@ def _check_beat(value: str, channel: ChannelSettings) -> None:
         raise SettingError("beat", value, "must lie between 100 Hz and 3 kHz")
 
 
+def _notch(value: str) -> AutoOrLevel:
+    if value == AUTO:
+        return AUTO
+    return OFF if value == OFF else parse_frequency_hz(value, "notch")
+
+
+def _check_notch(value: str, channel: ChannelSettings) -> None:
+    if value == OFF:
+        return
+    if channel.emission.family == "A1A":
+        raise SettingError("notch", value, "would take out the note that an A1A channel is heard by", "leave it out")
+    if channel.notch_hz != AUTO and not channel.audio_hz[0] <= float(channel.notch_hz) <= channel.audio_hz[1]:
+        low_hz, high_hz = channel.audio_hz
+        raise SettingError("notch", value, f"must lie within the message's {low_hz:g}-{high_hz:g} Hz")
+
+
+def _check_deemphasis(value: str, channel: ChannelSettings) -> None:
+    if value != OFF and channel.emission.family not in ("A3E", "AM-STEREO", "C3E", "DSB-SC"):
+        raise SettingError("deemphasis", value, "is for broadcasts: A3E, AM-STEREO, C3E, DSB-SC", "leave it out")
+
+
+def _check_blanker(value: str, channel: ChannelSettings) -> None:
+    if channel.blanker_db not in (AUTO, OFF) and not 6.0 <= float(channel.blanker_db) <= 60.0:
+        raise SettingError("blanker", value, "must lie between 6dB and 60dB", "blanker=auto is 14dB")
+
+
+def _check_log(value: str, channel: ChannelSettings) -> None:
+    if value == "transmissions" and channel.squelch_db == OFF:
+        raise SettingError("log", value, "needs a squelch to tell where one begins", "use squelch=auto, or log=all")
+
+
 def _anything(_: str, __: ChannelSettings) -> None:
     """No rule beyond those of its parser."""
 
@@ -283,9 +319,10 @@ _KEYS: dict[str, Callable[[str, ChannelSettings], None]] = {
     "transmit_response": _check_slope,
     "agc": _anything,
     "squelch": _anything,
-    "notch": _only_off("notch"),
-    "blanker": _only_off("blanker"),
-    "log": _only_off("log"),
+    "notch": _check_notch,
+    "deemphasis": _check_deemphasis,
+    "blanker": _check_blanker,
+    "log": _check_log,
 }
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import deque
 from collections.abc import Sequence
 
 import numpy as np
@@ -22,13 +23,14 @@ from rxchain.streams import ComplexBlock, FloatBlock
 _OVERSAMPLING, _OVERSAMPLING_SIDED = 2, 4
 # Samples that a detector takes at a time: more cost less a sample and wait longer.
 _HOP, _HOP_LIVE = 512, 64
+_REMEMBERED = 1_000  # reasons of each channel
 
 
 class DetectorSet:
     """All detectors of a group, the picker between them where there is a choice, and the switch that carries it out."""
 
     def __init__(self, kind: GroupKind, channels: Sequence[ChannelSettings], rate_hz: float, usable_hz: float) -> None:
-        self._kind = kind
+        self._kind, self._rate_hz = kind, rate_hz
         self._channels = channels
         self._names = kind.candidates
         self._detectors = [_detector(name, channels, rate_hz, kind.live) for name in self._names]
@@ -36,6 +38,8 @@ class DetectorSet:
         self._picker: DetectorPicker | None = None
         self._served = np.zeros((len(channels), len(self._names)), np.int64)
         self._reasons = [[""] * len(self._names) for _ in channels]
+        self._steps = 0
+        self._said: list[deque[tuple[int, str, str]]] = [deque(maxlen=_REMEMBERED) for _ in channels]
         if len(self._names) > 1:
             picked = [PickedChannel(c.emission, c.audio_hz, c.vestige_hz, self._names) for c in channels]
             self._picker = DetectorPicker(picked, rate_hz, usable_hz)
@@ -82,6 +86,22 @@ class DetectorSet:
         if self._picker is not None and choices.shape[1]:
             for row, (reason, chosen) in enumerate(zip(self._picker.reasons(), choices[:, -1], strict=True)):
                 self._reasons[row][chosen] = reason
+                self._remember(row, self._names[chosen], reason)
+        self._steps += choices.shape[1]
+
+    def _remember(self, row: int, name: str, reason: str) -> None:
+        said = self._said[row]
+        if not said or said[-1][1:] != (name, reason):
+            said.append((self._steps, name, reason))
+
+    def in_words_at(self, row: int, seconds: float, was_locked: bool) -> tuple[str, str]:
+        """The detector that served a channel at a time, seconds of the group's stream, and the reason given then."""
+        if self._picker is None:
+            return self.in_words(row, was_locked)
+        step = seconds * self._rate_hz / self._picker.step_samples
+        said = [(name, reason) for at, name, reason in self._said[row] if at <= step]
+        name, reason = said[-1] if said else (self._said[row][0][1:] if self._said[row] else (self._names[0], ""))
+        return ("coherent" if name in ("upper", "lower") else name), reason
 
     def _activate(self) -> None:
         """Detectors run where they are chosen for this step or were for the one before: a change is faded within it."""

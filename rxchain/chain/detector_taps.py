@@ -6,7 +6,8 @@ from functools import partial
 
 import numpy as np
 
-from rxchain.chain.channel_settings import ChannelSettings
+from rxchain.audio.deemphasis import deemphasis_taps
+from rxchain.chain.channel_settings import OFF, ChannelSettings
 from rxchain.detectors import vestigial
 from rxchain.detectors.envelope import emission_band
 from rxchain.detectors.sidebands import both_sidebands, one_sideband, quarter_turned
@@ -22,6 +23,10 @@ def coherent_taps(
     channel: ChannelSettings, rate_hz: float, sideband: str | None = None, live: bool = False
 ) -> list[ComplexTaps]:
     """One filter a message. ``sideband`` overrides the channel's own choice for a double sideband."""
+    return [_deemphasised(taps, channel, rate_hz) for taps in _flat_taps(channel, rate_hz, sideband, live)]
+
+
+def _flat_taps(channel: ChannelSettings, rate_hz: float, sideband: str | None, live: bool) -> list[ComplexTaps]:
     emission, (low_hz, high_hz) = channel.emission, channel.audio_hz
     match emission.family:
         case "A3E" | "DSB-SC":
@@ -55,7 +60,11 @@ def envelope_band(channel: ChannelSettings, rate_hz: float, live: bool = False) 
 
 def message_taps(channel: ChannelSettings, rate_hz: float, live: bool = False) -> ComplexTaps:
     """The audio band that follows an envelope."""
-    return both_sidebands(*channel.audio_hz, rate_hz, live=live)
+    return _deemphasised(both_sidebands(*channel.audio_hz, rate_hz, live=live), channel, rate_hz)
+
+
+def _deemphasised(taps: ComplexTaps, channel: ChannelSettings, rate_hz: float) -> ComplexTaps:
+    return taps if channel.deemphasis == OFF else np.convolve(taps, deemphasis_taps(rate_hz))
 
 
 def _double_sideband(sideband: str, low_hz: float, high_hz: float, rate_hz: float, live: bool) -> ComplexTaps:

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 from rxchain.carrier.speech_verdict import RANGE_HZ
 from rxchain.carrier.track import Follow
-from rxchain.chain.channel_settings import AUTO, ChannelSettings
+from rxchain.chain.channel_settings import AUTO, OFF, ChannelSettings
 from rxchain.emissions import Reference
 from rxchain.errors import SettingError
 from rxchain.tuning.plan import BankPlan
@@ -42,6 +42,8 @@ class GroupKind:
     stereo: bool
     n_messages: int
     candidates: tuple[str, ...]
+    logged: bool = False
+    notched: bool = False
 
     @property
     def envelope_only(self) -> bool:
@@ -63,6 +65,8 @@ def kind_of(channel: ChannelSettings, plan: BankPlan) -> GroupKind:
         stereo=emission.family == "AM-STEREO",
         n_messages=len(emission.messages),
         candidates=candidates_of(channel),
+        logged=channel.log != OFF,
+        notched=channel.notch_hz != OFF,
     )
 
 

@@ -11,8 +11,8 @@ import numpy as np
 from rxchain.carrier.track import Follow
 from rxchain.chain.auto_channels import AutoChannels
 from rxchain.chain.channel_group import ChannelGroup
-from rxchain.chain.channel_settings import ChannelSettings, as_emission
-from rxchain.chain.grouping import grouped
+from rxchain.chain.channel_settings import AUTO, OFF, ChannelSettings, as_emission
+from rxchain.chain.grouping import grouped, kind_of
 from rxchain.chain.handover import FADE_S, Handover
 from rxchain.chain.status import ChannelStatus
 from rxchain.emissions import Emission
@@ -20,16 +20,18 @@ from rxchain.errors import SettingError
 from rxchain.identify.naming import CANT_TELL
 from rxchain.meters.figures import Figures
 from rxchain.sources.protocol import SourceInfo
-from rxchain.streams import Block, ComplexBlock, FloatBlock, Floats, Reading
+from rxchain.streams import Block, Bools, ComplexBlock, FloatBlock, Floats, Reading
 from rxchain.tuning.channel_bank import HOPS_A_BATCH, LIVE_HOPS_A_BATCH, ChannelBank
+from rxchain.tuning.impulse_blanker import AUTO_DB, ImpulseBlanker
 from rxchain.tuning.plan import plan_bank
 from rxchain.units import format_frequency
 
 _SILENCE_PIECE = 1 << 18
 _TREND_POINTS = 60
 _SPECTRUM_PARTS = 480
+_MOST_EVENTS = 100_000
 # How long a new group is left to find its carrier and its gain before it is heard.
-_SETTLES_S = 1.0
+_SETTLES_S, _SETTLES_BY_HAND_S = 1.0, 0.35
 _SETTLED_S = {Follow.SQUARE: 2.6, Follow.PILOT: 1.4}
 
 
@@ -39,6 +41,18 @@ class ChannelAudio:
 
     place: int
     audio: FloatBlock
+
+
+@dataclass(frozen=True, slots=True)
+class ChannelTap:
+    """What a logbook needs of one channel, following on what came before; see ``TappedGroup``."""
+
+    place: int
+    group: ChannelGroup
+    row: int
+    iq: ComplexBlock
+    steps: Bools
+    audio: FloatBlock | None
 
 
 class _Run:
@@ -67,6 +81,7 @@ class Receiver:
         self._bank = ChannelBank(self._plan, [], LIVE_HOPS_A_BATCH if is_live else HOPS_A_BATCH)
         self._runs: list[_Run] = []
         self._at: dict[int, tuple[ChannelGroup, int]] = {}
+        self._next: dict[int, ChannelSettings] = {}
         self._handovers: dict[int, tuple[Handover, _Run, _Run]] = {}
         self._audio_rates: dict[int, float] = {}
         self._audio_samples = [0] * len(channels)
@@ -75,7 +90,10 @@ class Receiver:
                 self._at[place] = run.group, row
                 self._audio_rates[place] = run.group.audio_rate_hz
         self._auto = self._identifies(channels)
+        self._blanker = _blanker(channels, info.sample_rate_hz)
         self.samples = self.samples_lost = self.gaps = self.overloaded = 0
+        self.losses: deque[tuple[float, float]] = deque(maxlen=_MOST_EVENTS)  # seconds: when, how much
+        self.overloads: deque[tuple[float, int]] = deque(maxlen=_MOST_EVENTS)  # when, how many samples
         self._in_gap = False  # a gap may be told in parts
         trends = len(channels)
         self._offsets: list[deque[float]] = [deque(maxlen=_TREND_POINTS) for _ in range(trends)]
@@ -106,12 +124,15 @@ class Receiver:
             rate_hz = self.info.sample_rate_hz
             for run in self._runs:
                 run.group.mark_lost(self.elapsed_s, block.samples_lost / rate_hz)
+            self.losses.append((self.elapsed_s, block.samples_lost / rate_hz))
             left = block.samples_lost
             while left:
                 n = min(left, _SILENCE_PIECE)
                 audio += self._through(np.zeros(n, np.complex64))
                 left -= n
             self.samples_lost += block.samples_lost
+        if block.overloaded:
+            self.overloads.append((self.elapsed_s, block.overloaded))
         self._in_gap = not len(block.iq) and (self._in_gap or block.samples_lost > 0)
         if block.centre_hz is not None:
             self._bank.retune(block.centre_hz - self.info.centre_hz)
@@ -122,7 +143,8 @@ class Receiver:
 
     def flush(self) -> list[ChannelAudio]:
         """The last of every channel's audio; each is as long as the stream."""
-        audio = self._delivered(self._bank.flush())
+        audio = [] if self._blanker is None else self._tuned(self._blanker.flush())
+        audio += self._delivered(self._bank.flush())
         for run in list(self._runs):
             audio += self._from_run(run, run.group.flush())
         for place, (handover, _, _) in self._handovers.items():
@@ -130,10 +152,35 @@ class Receiver:
         self._handovers.clear()
         return audio
 
+    def take_taps(self) -> list[ChannelTap]:
+        """What the logged channels' groups made since the last time."""
+        taps = []
+        for run in self._runs:
+            tapped = run.group.take_tap()
+            if tapped is None:
+                continue
+            for row, place in enumerate(run.places):
+                if self._at[place] == (run.group, row):
+                    audio = None if tapped.audio is None else tapped.audio[row]
+                    taps.append(ChannelTap(place, run.group, row, tapped.iq[row], tapped.steps[row], audio))
+        return taps
+
     def change(self, place: int, channel: ChannelSettings) -> None:
-        """Receives a channel in another way from the next batch on; its audio goes over without a click."""
+        """Receives a channel in another way from the next batch on; its audio goes over without a click.
+
+        Raises :class:`SettingError` where the channel cannot be received so; nothing changes then. While it is on its way
+        from an earlier change, the latest waits until it has arrived.
+        """
         _check_inside(channel, self.info)
-        self._change_all({place: channel})
+        kind_of(channel, self._plan)
+        if place in self._handovers:
+            self._next[place] = channel
+        else:
+            self._change_all({place: channel}, _SETTLES_BY_HAND_S)
+
+    def wanted(self, place: int) -> ChannelSettings:
+        """How a channel is to be received once all changes have been carried out."""
+        return self._next.get(place, self.channels[place])
 
     def figures(self, place: int) -> Figures:
         """A channel's figures since the start, as of the last :meth:`measure` with ``overall``."""
@@ -229,14 +276,15 @@ class Receiver:
                 started.append(run)
         return started
 
-    def _change_all(self, wanted: dict[int, ChannelSettings]) -> None:
+    def _change_all(self, wanted: dict[int, ChannelSettings], settles_s: float | None = None) -> None:
         """Each channel's audio is taken from its new group once that has settled; a change on the way ends at once."""
         wanted = {place: channel for place, channel in wanted.items() if place not in self._handovers}
         old_runs = {place: self._run_of(place) for place in wanted}
         for run in self._start(wanted):
             group, rate_hz = run.group, run.group.audio_rate_hz
             first = round(group.first_index * rate_hz / group.rate_hz)
-            settled = first + round(_SETTLED_S.get(group.kind.follow, _SETTLES_S) * rate_hz)
+            wait_s = settles_s or _SETTLED_S.get(group.kind.follow, _SETTLES_S)
+            settled = first + round(wait_s * rate_hz)
             for place in run.places:
                 handover = Handover(self._audio_samples[place], first, settled, round(FADE_S * rate_hz))
                 self._handovers[place] = handover, old_runs[place], run
@@ -247,7 +295,15 @@ class Receiver:
         group = self._at[place][0]
         return next(run for run in self._runs if run.group is group)
 
+    @property
+    def blanked_fraction(self) -> float:
+        """Share of the samples that the impulse blanker cut out."""
+        return self._blanker.blanked / self.samples if self._blanker is not None and self.samples else 0.0
+
     def _through(self, iq: ComplexBlock) -> list[ChannelAudio]:
+        return self._tuned(iq if self._blanker is None else self._blanker.process(iq))
+
+    def _tuned(self, iq: ComplexBlock) -> list[ChannelAudio]:
         if self._auto is None:
             return self._delivered(self._bank.process(iq))
         # What is identified takes effect at the next batch, whatever the blocks are.
@@ -266,13 +322,18 @@ class Receiver:
         if self._auto is not None and len(blocks) and blocks[-1].shape[1]:
             self._take_up(self._auto.process(blocks[-1]))
         self._drop_idle()
+        self._change_waiting()
         return audio
+
+    def _change_waiting(self) -> None:
+        for place in [place for place in self._next if place not in self._handovers]:
+            self._change_all({place: self._next.pop(place)}, _SETTLES_BY_HAND_S)
 
     def _take_up(self, known: list[tuple[int, Emission]]) -> None:
         changed = {
             place: as_emission(self.channels[place], emission)
             for place, emission in known
-            if emission is not self.channels[place].emission
+            if emission is not self.channels[place].emission and not self.channels[place].emission_given
         }
         if changed:
             self._change_all(changed)
@@ -313,6 +374,14 @@ def messages_of(channel: ChannelSettings) -> tuple[str, ...]:
     if channel.emission.is_double_sideband and channel.sideband != "both":
         return (channel.sideband,)
     return channel.emission.messages
+
+
+def _blanker(channels: Sequence[ChannelSettings], rate_hz: float) -> ImpulseBlanker | None:
+    """One for the whole capture, where any channel asks for it; the most sensitive threshold counts."""
+    wanted = [channel.blanker_db for channel in channels if channel.blanker_db != OFF]
+    if not wanted:
+        return None
+    return ImpulseBlanker(rate_hz, min(AUTO_DB if one == AUTO else float(one) for one in wanted))
 
 
 def _check_inside(channel: ChannelSettings, info: SourceInfo) -> None:

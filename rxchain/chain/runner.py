@@ -8,6 +8,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Protocol
 
+from rxchain.chain.commands import Commands
 from rxchain.chain.receiver import ChannelAudio, Receiver
 from rxchain.chain.status import ReceiverStatus, SoundStatus
 from rxchain.errors import FaultError
@@ -37,6 +38,7 @@ class Runner:
     """Runs a receiver on a source; everything numeric happens in the thread that calls :meth:`run`.
 
     clock : seconds, steadily rising; paces the snapshots. show : takes a snapshot now and then; None: nobody looks.
+    commands : carried out before each block. after_block : called in the numeric thread after each block and after the last.
     health : asks how it stands with the source. sound : asks how it stands with the sound.
     """
 
@@ -49,10 +51,14 @@ class Runner:
         show: Callable[[ReceiverStatus], None] | None = None,
         health: Callable[[], SourceHealth] = SourceHealth,
         sound: Callable[[], SoundStatus | None] = lambda: None,
+        after_block: Callable[[], None] = lambda: None,
+        commands: Commands | None = None,
     ) -> None:
         self._source, self._receiver, self._sink = source, receiver, sink
         self._clock, self._show, self._health = clock, show, health
         self._sound = sound
+        self._after_block = after_block
+        self._commands = commands or Commands()
         self._stop = threading.Event()
         self._started = 0.0
         self._shown = -float("inf")
@@ -67,7 +73,9 @@ class Runner:
         fault: FaultError | None = None
         try:
             for block in self._source.blocks():
+                self._commands.run_all()
                 self._deliver(self._receiver.process(block))
+                self._after_block()
                 self._maybe_show()
                 if self._stop.is_set():
                     break
@@ -77,6 +85,7 @@ class Runner:
             self._source.close()
         try:
             self._deliver(self._receiver.flush())
+            self._after_block()
         except FaultError as error:
             fault = fault or error
         self._receiver.measure(overall=True)

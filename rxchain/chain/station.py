@@ -10,6 +10,9 @@
     emission = "A3E"
     name = "harbour"
 
+    [log]
+    folder = "log"                 # from the file's own folder
+
 Every error names the file, the key, the value and the rule.
 """
 
@@ -27,11 +30,14 @@ _SOURCE_KEYS = ("path", "receiver", "rate", "centre", "capture", "gain", "ppm", 
 
 @dataclass(frozen=True, slots=True)
 class Station:
-    """source : what ``rxchain receive`` would take as SOURCE. source_options : its further keys, as written."""
+    """source : what ``rxchain receive`` would take as SOURCE. source_options : its further keys, as written. log :
+    folder of the logbook, None where the file has none.
+    """
 
     source: str
     source_options: dict[str, str]
     channels: tuple[ChannelSettings, ...]
+    log: Path | None = None
 
 
 def load_station(path: Path) -> Station:
@@ -41,8 +47,8 @@ def load_station(path: Path) -> Station:
 
 def _station(table: dict[str, object], folder: Path) -> Station:
     for key in table:
-        if key not in ("source", "channel"):
-            raise SettingError(key, "...", "not a table of a station file", "there are [source] and [[channel]]")
+        if key not in ("source", "channel", "log"):
+            raise SettingError(key, "...", "not a table of a station file", "there are [source], [log] and [[channel]]")
     source = table.get("source")
     if not isinstance(source, dict):
         raise SettingError("source", source, "a station file has one [source] table")
@@ -58,14 +64,26 @@ def _station(table: dict[str, object], folder: Path) -> Station:
         raise SettingError("channel", channels, "a station file has at least one [[channel]] table")
     options = {key: str(value) for key, value in source.items() if key not in ("path", "receiver")}
     name = str(folder / str(source["path"])) if "path" in source else str(source["receiver"])
-    return Station(name, options, tuple(_channel(number, one, folder) for number, one in enumerate(channels, 1)))
+    log = _log(table.get("log"), folder)
+    # In a station that has a logbook every channel is logged that does not say otherwise.
+    usual = {} if log is None else {"log": "transmissions"}
+    made = tuple(_channel(number, one, folder, usual) for number, one in enumerate(channels, 1))
+    return Station(name, options, made, log)
 
 
-def _channel(number: int, table: object, folder: Path) -> ChannelSettings:
+def _log(table: object, folder: Path) -> Path | None:
+    if table is None:
+        return None
+    if not isinstance(table, dict) or set(table) != {"folder"}:
+        raise SettingError("log", table, "the [log] table has one key", 'write folder = "log"')
+    return folder / str(table["folder"])
+
+
+def _channel(number: int, table: object, folder: Path, usual: dict[str, str]) -> ChannelSettings:
     if not isinstance(table, dict):
         raise SettingError(f"channel {number}", table, "must be a table")
     try:
-        return channel_from_table(table, folder)
+        return channel_from_table(usual | table, folder)
     except SettingError as error:
         raise RequestError(f"channel {number}: {error}") from error
 

@@ -32,7 +32,7 @@ def run(arguments: argparse.Namespace) -> int:
     out = Path(arguments.out) if arguments.out else Path(tempfile.mkdtemp(prefix="rxchain-demo-"))
     print("An invented coast on 96 kHz of medium wave, 24 seconds, a station of each kind.", flush=True)
     request = Request(
-        station.source, {}, station.channels, out, live_pace=arguments.pace == "live", quiet=arguments.quiet
+        station.source, {}, station.channels, out, None, live_pace=arguments.pace == "live", quiet=arguments.quiet
     )
     result = receive(request)
     receiver = result.receiver

@@ -15,6 +15,7 @@ _COMMANDS = {
     "identify": "find the emissions in a capture, name each and say how sure",
     "devices": "list the receivers and sound outputs that can be used here, and what is missing",
     "synthesize": "make a test capture with known truth from a scene file",
+    "log": "list, show, verify, re-receive and export what was logged",
     "demo": "receive the shipped scene, with no hardware",
 }
 

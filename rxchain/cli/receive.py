@@ -16,7 +16,8 @@ examples:
 
 A channel is FREQUENCY EMISSION [key=value ...], with auto for an EMISSION that is to be found out; the keys are those of
 a [[channel]] table:
-name, audio, detector, sideband, delay, align, beat, vestige, slope, transmit_response, agc, squelch."""
+name, audio, detector, sideband, delay, align, beat, vestige, slope, transmit_response, agc, squelch,
+notch, blanker, deemphasis, log."""
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -33,6 +34,9 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--channel", action="append", default=[], metavar="TEXT", help="adds a channel; may be repeated"
     )
     parser.add_argument("--out", metavar="DIR", help="folder for audio and summary.json; made if it is not there")
+    parser.add_argument(
+        "--log", metavar="DIR", help="folder of the logbook, for channels with a log key; OUT/log if left out"
+    )
     parser.add_argument(
         "--pace",
         choices=("live", "fast"),
@@ -53,13 +57,14 @@ def run(arguments: argparse.Namespace) -> int:
 
     channels = tuple(channel_from_text(text) for text in arguments.channel)
     options = given_options(vars(arguments))
-    source = arguments.source
+    source, station_log = arguments.source, None
     if source.lower().endswith(".toml"):
         station = load_station(Path(source))
         source, options = station.source, station.source_options | options
-        channels = station.channels + channels
+        channels, station_log = station.channels + channels, station.log
     out = Path(arguments.out) if arguments.out else None
+    log = Path(arguments.log) if arguments.log else station_log
     listen = listen_of(arguments)
     live_pace = arguments.pace == "live"
-    request = Request(source, options, channels, out, live_pace=live_pace, quiet=arguments.quiet, listen=listen)
+    request = Request(source, options, channels, out, log, live_pace=live_pace, quiet=arguments.quiet, listen=listen)
     return receive(request).exit_status

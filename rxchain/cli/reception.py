@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import datetime as dt
 import os
 import signal
 import sys
@@ -12,7 +13,7 @@ from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 from types import FrameType
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 # Small matrix products gain nothing from threads, and threads cost the numeric one its quiet.
 os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
@@ -20,12 +21,14 @@ os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 import numpy as np
 
 from rxchain.chain.centre_choice import centre_beside, channels_on_spike
-from rxchain.chain.channel_settings import ChannelSettings
+from rxchain.chain.channel_settings import OFF, ChannelSettings
+from rxchain.chain.commands import Commands
 from rxchain.chain.receiver import Receiver
 from rxchain.chain.runner import Runner, span_text
 from rxchain.chain.station import check_names
 from rxchain.cli.listen_options import Listen, live_where_heard, open_listening
 from rxchain.cli.main import one_line
+from rxchain.cli.operator import Operator
 from rxchain.cli.source_options import parsed_options
 from rxchain.dashboard.display import Display, make_display
 from rxchain.errors import FaultError, SettingError
@@ -35,18 +38,23 @@ from rxchain.sources.health import SourceHealth, Watched
 from rxchain.sources.opening import RECEIVER_PREFIX, open_source
 from rxchain.sources.pacing import Paced
 
+if TYPE_CHECKING:
+    from rxchain.logbook.station_log import StationLog
+
 
 @dataclass(frozen=True, slots=True)
 class Request:
     """What to receive, and what to do with it.
 
-    options : the source's further keys, as written. listen : what to hear; it goes at live pace then.
+    options : the source's further keys, as written. log : folder of the logbook, None for the usual one. listen : what to
+    hear; it goes at live pace then.
     """
 
     source: str
     options: dict[str, str]
     channels: tuple[ChannelSettings, ...]
     out: Path | None
+    log: Path | None
     live_pace: bool
     quiet: bool
     listen: Listen | None = None
@@ -65,6 +73,7 @@ def receive(request: Request) -> Result:
     if not request.channels:
         raise SettingError("channel", "(none)", "there is nothing to receive", "add --channel 'FREQUENCY EMISSION'")
     check_names(request.channels)
+    log_folder = _log_folder(request)
     _lift_allocation_threshold()
     options = parsed_options(request.options)
     if request.source.partition(":")[0] == RECEIVER_PREFIX:
@@ -80,6 +89,7 @@ def receive(request: Request) -> Result:
         receiver = Receiver(source.info, live_where_heard(request.channels, request.listen))
         listening = open_listening(request.listen, receiver) if request.listen else None
         sink = AudioFolder(request.out, receiver) if request.out else NoAudio()
+        log = None if log_folder is None else _station_log(log_folder, receiver)
     except BaseException:
         if listening is not None:
             listening.close()
@@ -87,7 +97,8 @@ def receive(request: Request) -> Result:
         raise
     if is_live or live_pace:
         sys.setswitchinterval(1e-4)  # the display must not hold the numeric thread up for 5 ms at a time
-    display: Display = make_display(quiet=request.quiet)
+    commands = Commands()
+    display: Display = make_display(quiet=request.quiet, operations=Operator(commands, receiver, listening, log))
     watched = source if isinstance(source, Watched) else None
     runner = Runner(
         source,
@@ -97,6 +108,8 @@ def receive(request: Request) -> Result:
         display.show if display.wants_status else None,
         (lambda: watched.health) if watched else SourceHealth,
         listening.status if listening else lambda: None,
+        log.after_block if log is not None else lambda: None,
+        commands,
     )
 
     def stop_all() -> None:
@@ -108,6 +121,8 @@ def receive(request: Request) -> Result:
         if listening is not None:
             listening.close()
     fault = outcome.fault
+    if log is not None:
+        log.close(one_line(str(fault)) if fault else "stopped" if outcome.stopped else "ended")
     try:
         sink.close()
     except FaultError as error:
@@ -116,6 +131,28 @@ def receive(request: Request) -> Result:
         print(f"rxchain: {one_line(str(fault))}; {span_text(receiver)}, and that is kept", file=sys.stderr)
         return Result(receiver, fault.exit_status)
     return Result(receiver, 130 if outcome.stopped else 0)
+
+
+def _log_folder(request: Request) -> Path | None:
+    """Where the logbook goes; None where no channel is logged."""
+    logged = [channel for channel in request.channels if channel.log != OFF]
+    if not logged:
+        if request.log is not None:
+            raise SettingError(
+                "log", request.log, "no channel is logged", "give a channel log=transmissions or log=all"
+            )
+        return None
+    if request.log is not None:
+        return request.log
+    if request.out is None:
+        raise SettingError("log", logged[0].log, "the logbook needs a folder", "add --log DIR or --out DIR")
+    return request.out / "log"
+
+
+def _station_log(folder: Path, receiver: Receiver) -> StationLog:
+    from rxchain.logbook.station_log import StationLog
+
+    return StationLog(folder, receiver, time.monotonic, lambda: dt.datetime.now(dt.UTC))
 
 
 def _receiver_options(options: dict[str, Any], channels: tuple[ChannelSettings, ...]) -> dict[str, Any]:

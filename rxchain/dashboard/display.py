@@ -9,6 +9,7 @@ from contextlib import AbstractContextManager
 from typing import Protocol
 
 from rxchain.chain.status import ReceiverStatus
+from rxchain.dashboard.operations import Operations
 from rxchain.dashboard.plain import Nothing, PlainLines
 
 _LEAST_WIDTH, _LEAST_HEIGHT = 40, 8
@@ -28,7 +29,7 @@ class Display(Protocol):
         ...
 
 
-def make_display(quiet: bool) -> Display:
+def make_display(quiet: bool, operations: Operations | None = None) -> Display:
     """The dashboard on a terminal, plain lines in a pipe or on a terminal that cannot be drawn on, nothing if quiet."""
     if quiet:
         return Nothing()
@@ -42,4 +43,4 @@ def make_display(quiet: bool) -> Display:
         return PlainLines(sys.stdout, time.monotonic)
     from rxchain.dashboard.screen import Dashboard
 
-    return Dashboard(console)
+    return Dashboard(console, operations)

@@ -11,6 +11,7 @@ from rich.text import Text
 
 from rxchain.chain.status import ChannelStatus, ReceiverStatus
 from rxchain.dashboard.bars import Glyphs, depth_bar, snr_bar, trend
+from rxchain.dashboard.keys import HELP, Keyboard
 from rxchain.dashboard.wording import LOCK_WORDS, SHORT_LOCK_WORDS, clean, duration, frequency, short, with_uncertainty
 from rxchain.streams import Reading
 
@@ -19,9 +20,11 @@ _DETAIL_LINES = 6
 _STYLES = {"locked": "green", "held": "yellow", "none": "red", "nominal": "cyan"}
 
 
-def picture(status: ReceiverStatus, selected: int, width: int, height: int, glyphs: Glyphs) -> RenderableType:
+def picture(status: ReceiverStatus, keyboard: Keyboard, width: int, height: int, glyphs: Glyphs) -> RenderableType:
     """Everything that fits ``width`` by ``height`` characters."""
-    selected = min(max(selected, 0), max(0, len(status.channels) - 1))
+    if keyboard.shows_help:
+        return help_page(width)
+    selected = min(max(keyboard.selected, 0), max(0, len(status.channels) - 1))
     strip = width >= MEDIUM and height >= 16
     head = [overall_line(status, width)]
     if height >= 20 and len(status.spectrum_dbfs):
@@ -36,8 +39,42 @@ def picture(status: ReceiverStatus, selected: int, width: int, height: int, glyp
     note = f"channels {first + 1}–{first + rows} of {len(status.channels)}  " if hidden > 0 else ""
     if strip and status.channels:
         parts.append(detail_strip(status.channels[selected], width, glyphs))
-    parts.append(Text(note + "up/down select   q stop", style="dim", no_wrap=True, overflow="crop"))
+    parts.append(foot_line(status, keyboard, note, width))
     return Group(*parts)
+
+
+def foot_line(status: ReceiverStatus, keyboard: Keyboard, note: str, width: int) -> Text:
+    """What is being typed, or the answer to the latest wish, what is heard, and the way to the help."""
+    if keyboard.typed is not None:
+        return Text(f"word for the logbook: {keyboard.typed}_   (enter, or escape)", no_wrap=True, overflow="ellipsis")
+    line = Text(no_wrap=True, overflow="ellipsis")
+    if keyboard.is_frozen:
+        line.append("FROZEN  ", style="bold yellow")
+    sound = status.sound
+    if sound is not None:
+        muted = "muted" if sound.muted else f"{sound.volume_db:+.0f} dB"
+        line.append(f"heard {clean(sound.heard)} {muted}  ", style="cyan")
+        if sound.trouble:
+            line.append(f"! {clean(sound.trouble)}  ", style="bold red")
+    keys = f"{note}step {keyboard.step_hz:g} Hz  ? keys  q stop"
+    said = clean(keyboard.operations.said)
+    room = width - len(line) - len(keys) - 2
+    # An answer is worth more than the reminder of the keys where both do not fit.
+    line.append(f"{said}  " if len(said) <= room else said)
+    if len(said) <= room:
+        line.append(keys, style="dim")
+    return line
+
+
+def help_page(width: int) -> Table:
+    """What each key does."""
+    table = Table(box=None, pad_edge=False, padding=(0, 2, 0, 0), width=width, show_header=False)
+    table.add_column(style="bold", no_wrap=True)
+    table.add_column()
+    for keys, meaning in HELP:
+        table.add_row(keys, meaning)
+    table.add_row("", "any key: back")
+    return table
 
 
 def overall_line(status: ReceiverStatus, width: int) -> Text:

@@ -17,11 +17,11 @@ from rich.live import Live
 
 from rxchain.chain.status import ReceiverStatus
 from rxchain.dashboard.bars import ASCII, BLOCKS, Glyphs
+from rxchain.dashboard.keys import Keyboard
 from rxchain.dashboard.layout import picture
+from rxchain.dashboard.operations import NoOperations, Operations
 
 _REFRESH_S = 0.2
-# Arrow and page keys as terminals send them (ECMA-48), and the channels they move by.
-_MOVES = {"\x1b[A": -1, "\x1b[B": 1, "\x1b[5~": -10, "\x1b[6~": 10}
 
 
 class Dashboard:
@@ -32,17 +32,18 @@ class Dashboard:
 
     wants_status = True
 
-    def __init__(self, console: Console) -> None:
+    def __init__(self, console: Console, operations: Operations | None = None) -> None:
         self._console = console
+        self._keyboard = Keyboard(operations or NoOperations())
         self._glyphs: Glyphs = BLOCKS if "utf" in console.encoding.lower() else ASCII
         self._status: ReceiverStatus | None = None
-        self._selected = 0
         self._ended = threading.Event()
         self._failure: Exception | None = None
 
     def show(self, status: ReceiverStatus) -> None:
         """Takes the latest snapshot."""
-        self._status = status
+        if not self._keyboard.is_frozen:
+            self._status = status
 
     @contextmanager
     def running(self, stop: Callable[[], None]) -> Iterator[None]:
@@ -74,15 +75,8 @@ class Dashboard:
             status = self._status
             if status is not None:
                 width, height = self._console.size
-                live.update(picture(status, self._selected, width, height, self._glyphs), refresh=True)
-            self._obey(self._keys(), stop, len(status.channels) if status else 1)
-
-    def _obey(self, keys: str, stop: Callable[[], None], n_channels: int) -> None:
-        """Carries out the keys pressed; several may have come at once."""
-        if "q" in keys or "Q" in keys:
-            stop()
-        moves = sum(step * keys.count(key) for key, step in _MOVES.items())
-        self._selected = min(max(self._selected + moves, 0), n_channels - 1)
+                live.update(picture(status, self._keyboard, width, height, self._glyphs), refresh=True)
+            self._keyboard.obey(self._keys(), stop, len(status.channels) if status else 1)
 
     def _keys(self) -> str:
         """What was typed within one refresh."""

@@ -9,6 +9,7 @@ import scipy.fft
 from numpy.lib.stride_tricks import sliding_window_view
 from scipy import ndimage
 
+from rxchain.identify.drift import without_drift
 from rxchain.identify.neighbours import without_neighbours
 from rxchain.identify.reference import mirror_fit
 from rxchain.identify.short_time import RATE_HZ
@@ -32,11 +33,14 @@ _NEAR_HZ = 90.0  # what lies within is found by the measurement itself
 
 @dataclass(frozen=True, slots=True)
 class Prepared:
-    """iq : complex64, (samples,) at 12 kHz. shift_hz : how far it was turned. impulse_share : share blanked."""
+    """iq : complex64, (samples,) at 12 kHz. shift_hz : how far it was turned. impulse_share : share blanked. drift_hz_s : how
+    fast its carrier moves, taken out about the middle.
+    """
 
     iq: ComplexBlock
     shift_hz: float
     impulse_share: float
+    drift_hz_s: float
 
 
 def prepare_window(
@@ -52,7 +56,8 @@ def prepare_window(
     shift_hz = _far_reference_hz(wide, reach_hz) if reach_hz > _NEAR_HZ else 0.0
     if shift_hz:
         wide = (wide * np.exp(-2j * np.pi * shift_hz / RATE_HZ * np.arange(len(wide)))).astype(np.complex64)
-    return Prepared(without_neighbours(wide), shift_hz, share)
+    own, drift_hz_s = without_drift(without_neighbours(wide))
+    return Prepared(own, shift_hz, share, drift_hz_s)
 
 
 def blank_impulses(iq: ComplexBlock) -> tuple[ComplexBlock, float]:

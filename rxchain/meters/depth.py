@@ -46,7 +46,15 @@ class DepthMeter:
         magnitude, and noise like the channel's own is drawn from a generator.
     """
 
-    def __init__(self, is_double: Bools, frame: int, rate_hz: float, bands_hz: list[tuple[float, float]]) -> None:
+    def __init__(
+        self,
+        is_double: Bools,
+        frame: int,
+        rate_hz: float,
+        bands_hz: list[tuple[float, float]],
+        history: int = RECENT_CHUNKS,
+    ) -> None:
+        self._history = history
         self._is_double = is_double
         self._frame, self._rate_hz = frame, rate_hz
         n = frame // 2 + 1
@@ -73,7 +81,7 @@ class DepthMeter:
         self._highest_raw = np.zeros((2, n))
         self._noise_rms = np.zeros(n)
         self._any = np.zeros(n, bool)
-        self._latest: deque[Floats] = deque(maxlen=RECENT_CHUNKS)
+        self._latest: deque[Floats] = deque(maxlen=self._history)
         self._generator = np.random.default_rng(_SEED)
 
     def process(
@@ -156,9 +164,10 @@ class DepthMeter:
             sides += [np.where(steady, lines, value), np.sqrt(variance + _LEAST_PEAK_ERROR**2)]
         return sides[0], sides[1], sides[2], sides[3], self._any
 
-    def recent_peaks(self) -> tuple[Floats, Floats, Floats, Floats, Bools]:
-        """The same over the last chunks alone."""
-        recent = np.max(self._latest, axis=0) if self._latest else np.zeros_like(self._best[:, 0])
+    def recent_peaks(self, chunks: slice = slice(-RECENT_CHUNKS, None)) -> tuple[Floats, Floats, Floats, Floats, Bools]:
+        """The same over the last chunks alone, or over others of those still known."""
+        latest = list(self._latest)[chunks]
+        recent = np.max(latest, axis=0) if latest else np.zeros_like(self._best[:, 0])
         best = self._best.copy()
         best[:, 1:] += (recent - best[:, 0])[:, None]  # what the draws add to a peak is much the same from peak to peak
         best[:, 0] = recent

@@ -45,15 +45,19 @@ class GroupMeters:
     """Meters of the channels of one group.
 
     rate_hz : the channels' rate; usable_hz : half of the band within which their noise is flat.
+    history_s : how far back :meth:`between` can reach.
     process(turned) : upright samples and the follower's readings, any split of them.
     """
 
-    def __init__(self, channels: Sequence[MeteredChannel], rate_hz: float, usable_hz: float) -> None:
+    def __init__(
+        self, channels: Sequence[MeteredChannel], rate_hz: float, usable_hz: float, history_s: float = 0.0
+    ) -> None:
         self._channels = tuple(channels)
         n = len(channels)
         self._rate_hz, self._hop = rate_hz, hop_samples(rate_hz)
         self._chunk = _CHUNK_HOPS * self._hop
         self._frame = 2 * self._chunk // FRAMES
+        self._history = max(RECENT_CHUNKS, int(np.ceil(history_s * rate_hz / self._chunk)))
         self._spectra = MessageSpectra(channels, rate_hz, self._frame)
         # The floor is looked for near the emission: a recording may have been filtered narrower than its rate.
         reaches_hz = [_reach_hz(channel) for channel in channels]
@@ -84,14 +88,14 @@ class GroupMeters:
         self._floor = NoiseFloor(n, self._frame, self._rate_hz, self._usable_hz)
         block_s = BLOCK_HOPS * self._hop / self._rate_hz
         self._carrier = CarrierSums(n, block_s)
-        self._depth = DepthMeter(self._spectra.is_double, self._frame, self._rate_hz, self._bands)
+        self._depth = DepthMeter(self._spectra.is_double, self._frame, self._rate_hz, self._bands, self._history)
         self._total = Tally(n, self._spectra.n_messages)
-        self._recent: deque[Tally] = deque(maxlen=RECENT_CHUNKS)
+        self._recent: deque[Tally] = deque(maxlen=self._history)
         self._waiting: deque[Tally] = deque()
         self._heard_before = np.full(n, _HANG_CHUNKS + 1)
         self._was_locked: Bools = np.zeros(n, bool)
         self._voice_hz: Floats = np.full(n, np.nan)  # offset as last found from a voice
-        self._recent_carriers: deque[tuple[Floats, Floats, Bools]] = deque(maxlen=RECENT_CHUNKS)
+        self._recent_carriers: deque[tuple[Floats, Floats, Bools]] = deque(maxlen=self._history)
 
     def mark_lost(self, first_sample: int, n_samples: int) -> None:
         """Samples of the upright stream that were lost: whatever chunk they touch counts in no figure."""
@@ -109,14 +113,35 @@ class GroupMeters:
 
     def recent(self) -> list[Figures]:
         """Figures over the last three seconds."""
+        return self._figures_of(slice(-RECENT_CHUNKS, None), by_presence=False)
+
+    def between(self, first_s: float, last_s: float) -> list[Figures]:
+        """Figures of a stretch of time, in seconds of the upright stream, while the emission was present in it."""
+        oldest = self._chunks - len(self._recent)
+        chunk_s = self._chunk / self._rate_hz
+        first = max(0, round(first_s / chunk_s) - oldest)
+        last = max(first + 1, round(last_s / chunk_s) - oldest)
+        return self._figures_of(slice(first, last), by_presence=True)
+
+    def levels_db(self, first_s: float, last_s: float) -> Floats:
+        """Level of each chunk of a stretch of time, dB over full scale, (channels, chunks)."""
+        oldest = self._chunks - len(self._recent)
+        chunk_s = self._chunk / self._rate_hz
+        chunks = list(self._recent)[
+            max(0, round(first_s / chunk_s) - oldest) : max(0, round(last_s / chunk_s) - oldest)
+        ]
+        levels = [10.0 * np.log10(chunk.level + 1e-30) for chunk in chunks]
+        return np.stack(levels, axis=1) if levels else np.zeros((len(self._channels), 0))
+
+    def _figures_of(self, chunks: slice, by_presence: bool) -> list[Figures]:
         n = len(self._channels)
         tally = Tally(n, self._spectra.n_messages)
-        for chunk in self._recent:
-            tally.add(chunk, np.ones(n, bool))
+        for chunk in list(self._recent)[chunks]:
+            tally.add(chunk, chunk.present if by_presence else np.ones(n, bool))
         carrier = CarrierSums(n, BLOCK_HOPS * self._hop / self._rate_hz)
-        for blocks in self._recent_carriers:
+        for blocks in list(self._recent_carriers)[chunks]:
             carrier.add(*blocks)
-        return self._figures(tally, carrier, self._depth.recent_peaks())
+        return self._figures(tally, carrier, self._depth.recent_peaks(chunks))
 
     def overall(self) -> list[Figures]:
         """Figures since the start, while the emission was present."""

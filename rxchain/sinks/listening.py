@@ -8,6 +8,8 @@ import threading
 from collections.abc import Callable
 from typing import Protocol
 
+import numpy as np
+
 from rxchain.chain.receiver import ChannelAudio, Receiver, messages_of
 from rxchain.chain.status import SoundStatus
 from rxchain.errors import RequestError, SinkError
@@ -18,6 +20,7 @@ from rxchain.streams import FloatBlock
 _BLOCK_S = 0.005
 _FIRST_WAIT_S, _LONGEST_WAIT_S = 0.5, 4.0
 _STUCK_S = 2.0
+_NICE = -10
 # An output that takes samples faster than any real one would is held to this pace.
 _FASTEST, _AHEAD_S = 1.005, 0.2
 
@@ -55,7 +58,9 @@ class Listening:
     ) -> None:
         self._receiver, self._reopen, self._clock = receiver, reopen, clock
         self._output: Output | None = reopen()
-        self._voices = [Voice(receiver.audio_rate_hz(k), len(messages_of(c))) for k, c in enumerate(receiver.channels)]
+        # What is still being identified, or is changed on the way, may come to have two messages.
+        self._messages = [2 if not c.emission_given else len(messages_of(c)) for c in receiver.channels]
+        self._voices = [Voice(receiver.audio_rate_hz(k), n) for k, n in enumerate(self._messages)]
         self._playback = Playback(self._voices, self._output.rate_hz, hearing)
         self._playback.volume_db = volume_db
         self._closing = threading.Event()
@@ -70,7 +75,11 @@ class Listening:
 
     def write(self, audio: ChannelAudio) -> None:
         """Takes new audio of one channel; never waits for the speaker."""
-        self._playback.write(audio.place, audio.audio)
+        messages = self._messages[audio.place]
+        heard = audio.audio
+        if len(heard) != messages:
+            heard = np.repeat(heard.mean(axis=0, keepdims=True), messages, axis=0)
+        self._playback.write(audio.place, heard)
 
     def hear(self, hearing: Hearing) -> None:
         """Hears other channels from now on; from any thread."""
@@ -117,7 +126,7 @@ class Listening:
 
     def _play(self) -> None:
         with contextlib.suppress(OSError, AttributeError):  # where the system lets us: it is little work, and urgent
-            os.sched_setscheduler(threading.get_native_id(), os.SCHED_RR, os.sched_param(2))
+            os.setpriority(os.PRIO_PROCESS, threading.get_native_id(), _NICE)
         try:
             while not (self._closing.is_set() and self._output is None):
                 if self._output is None:

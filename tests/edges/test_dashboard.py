@@ -9,6 +9,7 @@ from rich.console import Console
 
 from rxchain.chain.status import ChannelStatus, ReceiverStatus
 from rxchain.dashboard.bars import ASCII, BLOCKS, depth_bar, snr_bar
+from rxchain.dashboard.keys import Keyboard
 from rxchain.dashboard.layout import picture
 from rxchain.dashboard.plain import PlainLines, channel_line
 from rxchain.dashboard.screen import Dashboard
@@ -72,7 +73,7 @@ def status(channels, **changes):
 def drawn(shown, width, height, selected=0, glyphs=BLOCKS):
     console = Console(width=width, height=height, file=io.StringIO(), force_terminal=True, no_color=True, _environ={})
     with console.capture() as capture:
-        console.print(picture(shown, selected, width, height, glyphs))
+        console.print(picture(shown, Keyboard(selected=selected), width, height, glyphs))
     text = capture.get()
     plain = "".join(part.partition("m")[2] if k else part for k, part in enumerate(text.split("\x1b[")))
     return plain.splitlines()
@@ -151,18 +152,6 @@ def test_grades_of_reception_are_ticks():
     empty = snr_bar(None, 41, ASCII)
     assert [k for k, character in enumerate(empty) if character == ":"] == [6, 15, 33]
     assert ":" not in snr_bar(40.0, 41, ASCII)
-
-
-def test_keys_move_the_selection_and_stop():
-    dashboard = Dashboard(Console(file=io.StringIO(), _environ={}))
-    stopped = []
-    dashboard._obey("\x1b[B\x1b[B\x1b[A\x1b[6~", lambda: stopped.append(1), 300)
-    assert dashboard._selected == 11
-    dashboard._obey("\x1b[5~\x1b[5~", lambda: stopped.append(1), 300)
-    assert dashboard._selected == 0
-    assert not stopped
-    dashboard._obey("q", lambda: stopped.append(1), 300)
-    assert stopped == [1]
 
 
 def test_plain_lines_come_at_their_time_and_survive_a_reader_that_goes():

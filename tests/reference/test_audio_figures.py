@@ -103,13 +103,9 @@ def test_a_gate_opens_and_shuts_with_ramps_of_10_ms_that_mirror_each_other():
 
 
 NOISE_S = 60
-STEPS_OPEN = pytest.mark.xfail(
-    raises=AssertionError,
-    reason="the loudest of four averaged frames outweighs the others: four steps of 20 dB in five open",
-)
 
 
-@pytest.mark.parametrize("step_db", [0.0, 6.0, pytest.param(20.0, marks=STEPS_OPEN)])
+@pytest.mark.parametrize("step_db", [0.0, 6.0, 20.0])
 @pytest.mark.parametrize("band_hz", [((-2_700.0, 2_700.0),), ((300.0, 2_700.0),), ((-4_500.0, 4_500.0),)])
 def test_a_squelch_stays_shut_in_noise_whatever_its_level(band_hz, step_db):
     """A step of the noise moves neither statistic, it says; designed for 0.3 openings an hour. Twenty channels, a minute,
@@ -147,3 +143,40 @@ def test_a_set_threshold_is_the_snr_that_opens(threshold_db, snr_db, is_open):
     squelch = Squelch([((300.0, 2_700.0),)], RATE_HZ, 5_000.0, np.array([float(threshold_db)]))
     steps = squelch.process(0.01 * (noise + message).astype(np.complex64)[None])[0]
     assert steps[10:].mean() > 0.99 if is_open else steps.mean() < 0.05
+
+
+OPENS_S = 0.11  # wanted of speech at 6 dB
+
+
+def test_speech_at_6_db_opens_soon(shared_recordings):
+    """From the first sound of a voice; 6 dB is its mean power over the noise in its band while it speaks."""
+    import soundfile
+    from scipy.signal import hilbert, resample_poly
+
+    voice, rate_hz = soundfile.read(shared_recordings / "speech" / "woman-30s-8k.wav")
+    voice = resample_poly(voice, 3, 2)
+    spectrum = np.fft.fft(hilbert(voice))
+    frequency_hz = np.fft.fftfreq(len(voice), 1 / RATE_HZ)
+    sideband = np.fft.ifft(np.where((frequency_hz >= 300) & (frequency_hz <= 2_700), spectrum, 0))
+    power = np.convolve(np.abs(sideband) ** 2, np.ones(240) / 240, "same")
+    speaking = power > 0.05 * np.quantile(power, 0.99)
+    starts = [
+        k for k in np.flatnonzero(np.diff(speaking.astype(int)) == 1) if not speaking[max(0, k - 6_000) : k].any()
+    ]
+    assert rate_hz == 8_000
+    assert len(starts) >= 5
+    rng = np.random.default_rng(8)
+    scale = np.sqrt(
+        2_400.0 / RATE_HZ * 10**0.6 / np.mean(np.abs(sideband[speaking]) ** 2)
+    )  # the noise has a power of 1
+    delays_s = []
+    for start in starts:
+        n = 24_000
+        piece = sideband[start : start + n].copy()
+        noise = (rng.standard_normal(6_000 + n) + 1j * rng.standard_normal(6_000 + n)) / np.sqrt(2.0)
+        noise[6_000 : 6_000 + len(piece)] += piece * scale
+        squelch = Squelch([((300.0, 2_700.0),)], RATE_HZ, 5_000.0, AUTOMATIC)
+        steps = squelch.process(noise.astype(np.complex64)[None])[0]
+        opened = np.flatnonzero(steps)
+        delays_s.append((opened[0] + 1) * squelch.step_samples / RATE_HZ - 0.5 if len(opened) else np.inf)
+    assert np.median(delays_s) < OPENS_S

@@ -235,7 +235,7 @@ def test_the_motion_watch_reads_frequency_and_tells_fading_from_drift() -> None:
     faded = np.array([np.convolve(row, shape, "valid") for row in white[0] + 1j * white[1]])
     drifting = np.exp(2j * np.pi * (0.2 * t + 0.5 * 0.05 * t**2))[None].repeat(channels, axis=0)
     for line, is_fast in ((faded, True), (drifting, False)):
-        watch = MotionWatch(channels, 4, HOP_S, fast_fading=True)
+        watch = MotionWatch(channels, 24, 4, HOP_S, fast_fading=True)
         for k in range(0, len(t), 4):
             watch.watch(line[:, k : k + 4], np.full(channels, 1e-6), np.ones(channels, np.bool_))
         assert np.mean(watch.fast) == pytest.approx(float(is_fast), abs=0.1)

@@ -49,6 +49,11 @@ class Material:
         limited = band_limited(np.resize(np.roll(recording, -int(rng.integers(len(recording)))), n), RATE_HZ, band_hz)
         return np.asarray(limited / np.max(np.abs(limited)))
 
+    def signal(self, n: int, band_hz: tuple[float, float], rng: np.random.Generator) -> Floats:
+        """Tones that stand for seconds, ticks, and a recording far below them."""
+        limited = band_limited(_signals(n, rng) + 0.02 * self.plain(n, band_hz, rng), RATE_HZ, band_hz)
+        return np.asarray(limited / np.max(np.abs(limited)))
+
     def _voice(self, n: int, rng: np.random.Generator) -> Floats:
         """A stretch of a voice at another speed, with another tone, in a room, before some background."""
         voice = self._recordings[rng.integers(len(self._recordings))]
