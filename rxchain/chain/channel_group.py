@@ -228,7 +228,7 @@ def _shift_hz(channel: ChannelSettings) -> float:
 
 
 def _metered(channel: ChannelSettings) -> MeteredChannel:
-    sideband = "both" if channel.sideband == "better" else channel.sideband
+    sideband = "both" if channel.sideband in ("better", "weighted") else channel.sideband
     return MeteredChannel(channel.emission, channel.audio_hz, channel.vestige_hz, sideband, channel.aligns_by_speech)
 
 

@@ -19,7 +19,7 @@ SPEECH = "speech"
 AutoOrLevel: TypeAlias = "Literal['auto', 'off'] | float"
 
 DETECTORS = (AUTO, "envelope", "rectifier", "coherent")
-SIDEBANDS = ("both", "upper", "lower", "better")
+SIDEBANDS = ("both", "upper", "lower", "better", "weighted")
 DELAYS = ("full", "live")
 DEEMPHASES = (OFF, "nrsc")
 LOGS = (OFF, "transmissions", "all")

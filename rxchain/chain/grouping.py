@@ -99,6 +99,8 @@ def largest_shift_hz(channel: ChannelSettings) -> float:
 def candidates_of(channel: ChannelSettings) -> tuple[str, ...]:
     """The detectors to run: the one asked for, or those between which the picker decides."""
     sides = ("upper", "lower") if channel.sideband == "better" else ()
+    if channel.sideband == "weighted":
+        return ("weighted",)
     if channel.detector != AUTO:
         return (channel.detector, *sides)
     if channel.sideband in ("upper", "lower"):
