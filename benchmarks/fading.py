@@ -104,7 +104,7 @@ def pilot(condition: str, strength_db: float, seconds: float, seed: int) -> tupl
                   fading=Fading(2, delay_s, spread_hz))  # fmt: skip
     pilot_dbfs = level_dbfs - CARRIER_DB["R3E"]
     scene = Scene(RATE_HZ, 1e6, seconds, (one,), seed=seed, noise_dbfs_hz=pilot_dbfs - strength_db)
-    rendered, audio, tracks = received(scene, ["1005kHz R3E-USB name=pilot agc=off squelch=off"])
+    _, audio, tracks = received(scene, ["1005kHz R3E-USB name=pilot agc=off squelch=off"])
     rate_hz = low_rate_hz(one, RATE_HZ)
     gains = path_gains(one.fading, round(seconds * rate_hz), rate_hz, child_seed(seed, "pilot fading")).sum(axis=0)
     track = tracks[0]
@@ -128,7 +128,7 @@ def main() -> None:
     seconds, seeds = (12.0, 1) if results.quick else (60.0, 3)
     conditions = CONDITIONS[1:2] if results.quick else CONDITIONS
     results.text(
-        f"Watterson channels of ITU-R F.1487, {seconds:g} s, {seeds} seeds, voices, through the whole receiver. A3E of depth 80 %, "
+        f"Watterson channels of ITU-R F.1487, {seconds:g} s, {seeds} seeds, voices, through the whole receiver. A3E, 80 %, "
         "300-3400 Hz. SINAD against the known message, each quarter second with a linear filter of its own, so that slow fading "
         "is forgiven and distortion and noise are not; mean of the quarter seconds. Cells: median / worst 5 % of seeds "
         "(with so few, the worst). Goal: coherent at least as good as the envelope everywhere, `auto` within 0.3 dB of it."
@@ -142,7 +142,7 @@ def main() -> None:
             results.row(condition, strength_db, *cells, f"{np.median(gain):+.2f} / {min(gain):+.2f}")
     results.close()
     results.text(
-        f"R3E-USB, pilot 18 dB under peak envelope power. Frequency error while the pilot is {PILOT_ABOVE_DB:g} dB over its noise "
+        f"R3E-USB, pilot 18 dB under peak envelope. Frequency error while the pilot is {PILOT_ABOVE_DB:g} dB over its noise "
         f"in {PILOT_BAND_HZ:g} Hz; goal {GOAL_HZ:g} Hz rms. Steps: largest sample-to-sample step of the audio over the 99.9 % "
         "quantile of all of them; a voice alone has 2 to 4. Median / worst."
     )

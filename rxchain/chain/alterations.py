@@ -38,7 +38,7 @@ def next_detector(channel: ChannelSettings) -> ChannelSettings:
 
 
 def next_sideband(channel: ChannelSettings) -> ChannelSettings:
-    """The other sideband of a single or vestigial emission; for a double sideband both, upper, lower, the better, both weighted."""
+    """The other sideband of a single or vestigial emission; for a double sideband the next way to use its two."""
     emission = channel.emission
     if emission.side is not None:
         other = f"{emission.family}-{'LSB' if emission.name.endswith('USB') else 'USB'}"
