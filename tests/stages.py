@@ -21,6 +21,7 @@ from rxchain.detectors.coherent import CoherentDetector
 from rxchain.detectors.envelope import EnvelopeDetector, emission_band
 from rxchain.detectors.sidebands import both_sidebands, one_sideband, quarter_turned
 from rxchain.detectors.switch import DetectorSwitch
+from rxchain.detectors.weighted_sidebands import WeightedSidebands
 from rxchain.emissions import Side
 from rxchain.tuning.channel_bank import ChannelBank
 from rxchain.tuning.plan import plan_bank
@@ -143,6 +144,13 @@ STAGES: dict[str, Entry] = {
     ),
     "coherent, two messages": Entry(
         lambda c: CoherentDetector(np.stack([BAND, quarter_turned(BAND)])[None], c), iq, np.complex64, np.float32
+    ),
+    "weighted sidebands": Entry(
+        lambda c: WeightedSidebands(
+            np.stack([2 * one_sideband(side, 300.0, 2_700.0, RATE_HZ) for side in (Side.UPPER, Side.LOWER)])[None],
+            c, RATE_HZ,
+        ),
+        iq, np.complex64, np.float32,
     ),
     **{
         f"envelope, {times} times": Entry(

@@ -6,7 +6,7 @@ from collections.abc import Sequence
 from dataclasses import replace
 from typing import TypeVar
 
-from rxchain.chain.channel_settings import AUTO, OFF, ChannelSettings, as_emission
+from rxchain.chain.channel_settings import AUTO, OFF, SIDEBANDS, ChannelSettings, as_emission
 from rxchain.emissions import EMISSIONS
 
 T = TypeVar("T")
@@ -38,7 +38,7 @@ def next_detector(channel: ChannelSettings) -> ChannelSettings:
 
 
 def next_sideband(channel: ChannelSettings) -> ChannelSettings:
-    """The other sideband of a single or vestigial emission; for a double sideband both, upper, lower, the better."""
+    """The other sideband of a single or vestigial emission; for a double sideband the next way to use its two."""
     emission = channel.emission
     if emission.side is not None:
         other = f"{emission.family}-{'LSB' if emission.name.endswith('USB') else 'USB'}"
@@ -46,7 +46,7 @@ def next_sideband(channel: ChannelSettings) -> ChannelSettings:
     if not emission.is_double_sideband:
         return channel
     detector = AUTO if channel.detector not in (AUTO, "coherent") else channel.detector
-    sideband = _after(("both", "upper", "lower", "better"), channel.sideband)
+    sideband = _after(SIDEBANDS, channel.sideband)
     return replace(channel, sideband=sideband, detector=detector)
 
 

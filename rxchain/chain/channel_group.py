@@ -221,7 +221,8 @@ def _follower(kind: GroupKind, channels: Sequence[ChannelSettings], rate_hz: flo
         return SpeechAligner(n, rate_hz, sides, [channel.audio_hz for channel in channels])
     # Where a pilot may be missing, it is not looked for among the messages.
     search_hz = _PILOT_SHARE * kind.message_hz[0] if kind.pilot_is_optional else FollowerSettings(kind.follow).search_hz
-    settings = FollowerSettings(kind.follow, max(search_hz, _LEAST_SEARCH_HZ), kind.live, kind.message_hz)
+    search_hz = kind.tolerance_hz or max(search_hz, _LEAST_SEARCH_HZ)
+    settings = FollowerSettings(kind.follow, search_hz, kind.live, kind.message_hz)
     if kind.follow is Follow.NOMINAL:
         return make_follower(settings, n, rate_hz, sides, np.array([_shift_hz(channel) for channel in channels]))
     if kind.fourth_power:
@@ -238,7 +239,7 @@ def _shift_hz(channel: ChannelSettings) -> float:
 
 
 def _metered(channel: ChannelSettings) -> MeteredChannel:
-    sideband = "both" if channel.sideband == "better" else channel.sideband
+    sideband = "both" if channel.sideband in ("better", "weighted") else channel.sideband
     return MeteredChannel(channel.emission, channel.audio_hz, channel.vestige_hz, sideband, channel.aligns_by_speech)
 
 

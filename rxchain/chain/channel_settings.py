@@ -19,11 +19,14 @@ SPEECH = "speech"
 AutoOrLevel: TypeAlias = "Literal['auto', 'off'] | float"
 
 DETECTORS = (AUTO, "envelope", "rectifier", "coherent")
-SIDEBANDS = ("both", "upper", "lower", "better")
+SIDEBANDS = ("both", "upper", "lower", "better", "weighted")
 DELAYS = ("full", "live")
 DEEMPHASES = (OFF, "nrsc")
 LOGS = (OFF, "transmissions", "all")
 SLOPES = ("sent", "received")
+# Spacing of airband channels: how far off a station may be, and its audio band. ICAO Annex 10 Vol. III 2.2.2.3: carriers within
+# 0.005 % (25 kHz) and 0.0005 % (8.33 kHz), at 130 MHz; bands from memory, after ETSI EN 300 676.
+SPACINGS = {"25kHz": (6_500.0, (300.0, 3_400.0)), "8.33kHz": (650.0, (350.0, 2_500.0))}
 _FIRST_TRY = EMISSIONS["A3E"]
 _KEYS_OF_ANY = ("frequency", "emission", "name", "audio", "delay", "agc", "squelch", "notch", "blanker", "log")
 _NAME = re.compile(r"[A-Za-z0-9_][A-Za-z0-9._+-]{0,63}")
@@ -40,6 +43,7 @@ class ChannelSettings:
         side sent whole, and gains; None where a straight slope is assumed.
     notch_hz : ``off``, ``auto`` (finds steady tones) or the frequency of one; deemphasis : ``off`` or ``nrsc``.
     blanker_db : ``off``, ``auto`` or the level over the median from which a sample of the capture is an impulse.
+    spacing : of airband channels: the carrier is then searched as far off as stations of that spacing may be.
     log : ``off``, ``transmissions`` or ``all``: what the logbook keeps of the channel.
     delay : ``auto`` is ``live`` for a channel that is heard and ``full`` for others.
     emission_given : whether the emission is the user's word; where not, it is a first try, to be identified.
@@ -66,8 +70,14 @@ class ChannelSettings:
     deemphasis: str = OFF
     blanker_db: AutoOrLevel = OFF
     log: str = OFF
+    spacing: str | None = None
     emission_given: bool = True
     audio_given: bool = False
+
+    @property
+    def tolerance_hz(self) -> float | None:
+        """How far off its frequency a station of the channel's spacing may be; None where no spacing is given."""
+        return None if self.spacing is None else SPACINGS[self.spacing][0]
 
 
 def channel_from_text(text: str) -> ChannelSettings:
@@ -113,6 +123,9 @@ def channel_from_table(table: Mapping[str, object], folder: Path = Path()) -> Ch
     emission = emission_named(values["emission"]) if emission_given else _FIRST_TRY
     beat_hz = parse_frequency_hz(values.get("beat", "700Hz"), "beat")
     audio_hz = _audio(values, emission, beat_hz)
+    spacing = _one_of("spacing", values["spacing"], tuple(SPACINGS)) if "spacing" in values else None
+    if spacing is not None and "audio" not in values:
+        audio_hz = SPACINGS[spacing][1]
     slope, response = _slope(values.get("slope", SLOPES[0]), values.get("transmit_response"), folder)
     channel = ChannelSettings(
         name=_name(
@@ -137,6 +150,7 @@ def channel_from_table(table: Mapping[str, object], folder: Path = Path()) -> Ch
         deemphasis=_one_of("deemphasis", values.get("deemphasis", OFF), DEEMPHASES),
         blanker_db=_auto_or_level("blanker", values.get("blanker", OFF)),
         log=_one_of("log", values.get("log", OFF), LOGS),
+        spacing=spacing,
         emission_given=emission_given,
         audio_given="audio" in values,
     )
@@ -239,6 +253,11 @@ def _check_sideband(value: str, channel: ChannelSettings) -> None:
         raise SettingError("sideband", value, "needs the coherent detector", "use detector=coherent or auto")
 
 
+def _check_spacing(value: str, channel: ChannelSettings) -> None:
+    if channel.emission.family != "A3E" or not channel.emission_given:
+        raise SettingError("spacing", value, "is for A3E, which the airband uses", "leave it out")
+
+
 def _check_vestige(_: str, channel: ChannelSettings) -> None:
     if not channel.emission.is_vestigial:
         raise SettingError(
@@ -311,6 +330,7 @@ _KEYS: dict[str, Callable[[str, ChannelSettings], None]] = {
     "audio": _anything,
     "detector": _check_detector,
     "sideband": _check_sideband,
+    "spacing": _check_spacing,
     "delay": _anything,
     "align": _check_align,
     "beat": _check_beat,

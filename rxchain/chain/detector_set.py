@@ -16,6 +16,7 @@ from rxchain.detectors.coherent import CoherentDetector
 from rxchain.detectors.envelope import RECTIFIER_GAIN, EnvelopeDetector
 from rxchain.detectors.picker import DetectorPicker, PickedChannel
 from rxchain.detectors.switch import DetectorSwitch
+from rxchain.detectors.weighted_sidebands import WeightedSidebands
 from rxchain.kernels.fir import ComplexTaps, centred
 from rxchain.streams import ComplexBlock, FloatBlock
 
@@ -114,6 +115,9 @@ class DetectorSet:
         channel = self._channels[row]
         if self._picker is None:
             name = self._names[0]
+            if name == "weighted":
+                strength = "both sidebands, each weighted by its strength of the moment"
+                return "coherent", strength if was_locked else self._only_way(channel, was_locked)
             asked = channel.detector != AUTO and len(channel.emission.detectors) > 1
             return name, "asked for" if asked else self._only_way(channel, was_locked)
         chosen = int(np.argmax(self._served[row]))
@@ -160,6 +164,11 @@ def _detector(
             _OVERSAMPLING_SIDED if sided else _OVERSAMPLING,
             hop,
         )
+    if name == "weighted":
+        pairs = [[coherent_taps(one, rate_hz, side)[0] for side in ("upper", "lower")] for one in channels]
+        longest = max(len(taps) for pair in pairs for taps in pair)
+        weighted = np.array([[centred(taps, longest) for taps in pair] for pair in pairs])
+        return WeightedSidebands(weighted, len(channels), rate_hz, hop)
     sideband = name if name in ("upper", "lower") else None
     filters: list[list[ComplexTaps]] = [coherent_taps(channel, rate_hz, sideband, live) for channel in channels]
     longest = max(len(taps) for filters_of in filters for taps in filters_of)

@@ -30,6 +30,7 @@ class GroupKind:
     """What all channels of a group share.
 
     bins : width of their channels in the bank. candidates : detectors that run, the first where there is no choice.
+    tolerance_hz : how far off the carrier may be, where a spacing says so.
     message_hz : band that the follower keeps apart from the carrier; only where it makes a difference to it.
     """
 
@@ -44,6 +45,7 @@ class GroupKind:
     candidates: tuple[str, ...]
     logged: bool = False
     notched: bool = False
+    tolerance_hz: float | None = None
 
     @property
     def envelope_only(self) -> bool:
@@ -67,6 +69,7 @@ def kind_of(channel: ChannelSettings, plan: BankPlan) -> GroupKind:
         candidates=candidates_of(channel),
         logged=channel.log != OFF,
         notched=channel.notch_hz != OFF,
+        tolerance_hz=channel.tolerance_hz,
     )
 
 
@@ -95,7 +98,9 @@ def half_width_hz(channel: ChannelSettings) -> float:
 
 
 def largest_shift_hz(channel: ChannelSettings) -> float:
-    """How far a channel may be turned from its nominal frequency on purpose."""
+    """How far a channel may be turned from its nominal frequency on purpose, or to a station that is far off."""
+    if channel.tolerance_hz is not None:
+        return channel.tolerance_hz
     if channel.emission.family == "A1A":
         return channel.beat_hz
     return RANGE_HZ if channel.aligns_by_speech else abs(channel.align_hz)
@@ -104,6 +109,8 @@ def largest_shift_hz(channel: ChannelSettings) -> float:
 def candidates_of(channel: ChannelSettings) -> tuple[str, ...]:
     """The detectors to run: the one asked for, or those between which the picker decides."""
     sides = ("upper", "lower") if channel.sideband == "better" else ()
+    if channel.sideband == "weighted":
+        return ("weighted",)
     if channel.detector != AUTO:
         return (channel.detector, *sides)
     if channel.sideband in ("upper", "lower"):
