@@ -51,7 +51,8 @@ code = main(arguments)
 spent = os.times()
 last, sound = seen[-1], [one.sound for one in seen if one.sound]
 json.dump({"code": code, "elapsed_s": last.elapsed_s, "lost": last.samples_lost, "gaps": last.gaps,
-    "late": last.late_blocks, "short": last.short_buffers, "reopened": last.reopened, "overruns": sys.modules["rtlsdr"].librtlsdr.standin_overruns() if "rtlsdr" in sys.modules else 0,
+    "late": last.late_blocks, "short": last.short_buffers, "reopened": last.reopened,
+    "overruns": sys.modules["rtlsdr"].librtlsdr.standin_overruns() if "rtlsdr" in sys.modules else 0,
     "overload": last.overload_fraction, "cpu_s": spent.user + spent.system, "wall_s": time.monotonic() - started,
     "underruns": sound[-1].underruns if sound else 0, "skips": sound[-1].skips if sound else 0,
     "losses": sound[-1].losses if sound else 0,
@@ -120,7 +121,8 @@ def table(rows: list[dict], file_share: float) -> list[str]:
         inside, outside = 1e3 * np.array(row["delays_s"]), 1e3 * row["outside_s"]
         wanted = ENVELOPE_MS if row["detector"] == "envelope" else COHERENT_MS
         lines.append(
-            f"| {row['detector']} | {row['elapsed_s']:.0f} | {row['lost']} in {row['gaps']} gaps ({row['overruns']} buffers not fetched) | {row['late']} | "
+            f"| {row['detector']} | {row['elapsed_s']:.0f} | "
+            f"{row['lost']} in {row['gaps']} gaps ({row['overruns']} buffers not fetched) | {row['late']} | "
             f"{row['underruns']}, {row['skips']} | {np.median(inside):.0f} ms ({inside.max():.0f}) | "
             f"{np.median(outside):.0f} ms ({outside.max():.0f}), {len(outside)} tones | {wanted} ms | "
             f"{100 * row['cpu_s'] / row['wall_s']:.0f} % of a core |"
