@@ -15,8 +15,8 @@ from rxchain.kernels.overlap_save import WindowedStage
 from rxchain.streams import FloatBlock, Floats
 
 _PIECE_S = 1e-3
-_QUANTUM = 64  # pieces worked on at a time; 16 where delay matters, which changes nothing but the cost
-_LIVE_QUANTUM = 16
+_QUANTUM = 64  # pieces worked on at a time; 8 where delay matters, which changes nothing but the cost
+_LIVE_QUANTUM = 8
 _SMOOTH = 8  # half-length of the averaging window, pieces
 _AHEAD = _SMOOTH + 1  # the peak search reaches this far on either side: the window, and the slope between two pieces
 _LOOK = _AHEAD + _SMOOTH + 1  # pieces that must be known after the one whose gain is wanted

@@ -10,6 +10,7 @@ import numpy as np
 from rxchain.audio.squelch import Squelch
 from rxchain.carrier.fallback import FallbackFollower
 from rxchain.carrier.follower import CarrierFollower, Follower, FollowerSettings, make_follower
+from rxchain.carrier.nominal import NominalFollower
 from rxchain.carrier.speech_aligner import SpeechAligner
 from rxchain.carrier.track import Follow, Lock, Turned
 from rxchain.chain.audio_path import AudioPath
@@ -51,6 +52,8 @@ class ChannelGroup:
         # A channel turned away from its middle takes the bank's slopes with it.
         usable_hz = plan.usable_hz(kind.bins) - max(largest_shift_hz(channel) for channel in channels)
         self._follower = _follower(kind, channels, self.rate_hz)
+        # An envelope needs no carrier: with short delay it doesn't wait for the follower, which serves the figures alone.
+        self._direct = NominalFollower(len(channels), self.rate_hz) if kind.envelope_only and kind.live else None
         history_s = _HISTORY_S if kind.logged else 0.0
         self._meters = GroupMeters([_metered(channel) for channel in channels], self.rate_hz, usable_hz, history_s)
         thresholds_db = [channel.squelch_db for channel in channels]
@@ -78,7 +81,8 @@ class ChannelGroup:
     @property
     def delay_s(self) -> float:
         """How far the audio runs behind the channel's I/Q while streaming, apart from waits for full hops."""
-        samples = self._follower.delay_samples + self._detectors.delay_samples + self._audio.delay_samples
+        turning = self._follower if self._direct is None else self._direct
+        samples = turning.delay_samples + self._detectors.delay_samples + self._audio.delay_samples
         return samples / self.rate_hz
 
     def process(self, iq: ComplexBlock) -> FloatBlock:
@@ -86,12 +90,16 @@ class ChannelGroup:
         if self._tap is not None:
             self._tap.iq.append(iq)
         turned = self._follower.process(iq)
-        return self._audio.process(self._detected(turned), self._opened(turned.iq))
+        self._measure(turned)
+        heard = turned if self._direct is None else self._direct.process(iq)
+        return self._audio.process(self._detected(heard), self._opened(heard.iq))
 
     def flush(self) -> FloatBlock:
         """The tail: as much audio in all as the channels' I/Q was long."""
         turned = self._follower.flush()
-        audio = [self._audio.process(self._detected(turned), self._opened(turned.iq))]
+        self._measure(turned)
+        heard = turned if self._direct is None else self._direct.flush()
+        audio = [self._audio.process(self._detected(heard), self._opened(heard.iq))]
         audio.append(self._audio.process(self._detectors.flush(), self._tapped_steps(self._squelch.flush())))
         audio.append(self._audio.flush(np.zeros((len(self.channels), 0), bool)))
         return np.concatenate(audio, axis=2)
@@ -178,7 +186,7 @@ class ChannelGroup:
         locked = self.locked_fraction(row)
         return self._detectors.in_words_at(row, seconds, locked is not None and locked > 0.0)
 
-    def _detected(self, turned: Turned) -> FloatBlock:
+    def _measure(self, turned: Turned) -> None:
         lock = turned.track.lock
         if lock.shape[1]:
             locked = lock == Lock.LOCKED
@@ -190,6 +198,8 @@ class ChannelGroup:
             self._hop_samples = turned.hop_samples
             self._lock_now = lock[:, -1]
         self._meters.process(turned)
+
+    def _detected(self, turned: Turned) -> FloatBlock:
         upright = sum_and_difference(turned.iq) if self.kind.stereo else turned.iq
         return self._detectors.process(turned, upright)
 

@@ -23,7 +23,7 @@ from rxchain.streams import ComplexBlock, FloatBlock
 # Emissions whose envelope is not that of a plain double sideband need more room before theirs is filtered.
 _OVERSAMPLING, _OVERSAMPLING_SIDED = 2, 4
 # Samples that a detector takes at a time: more cost less a sample and wait longer.
-_HOP, _HOP_LIVE = 512, 256
+_HOP, _HOP_LIVE = 512, 64
 _REMEMBERED = 1_000  # reasons of each channel
 
 
@@ -34,7 +34,7 @@ class DetectorSet:
         self._kind, self._rate_hz = kind, rate_hz
         self._channels = channels
         self._names = kind.candidates
-        self._detectors = [_detector(name, channels, rate_hz, _HOP_LIVE if kind.live else _HOP) for name in self._names]
+        self._detectors = [_detector(name, channels, rate_hz, kind.live) for name in self._names]
         self.delay_samples = max(detector.delay_samples for detector in self._detectors)
         self._picker: DetectorPicker | None = None
         self._served = np.zeros((len(channels), len(self._names)), np.int64)
@@ -153,13 +153,14 @@ class DetectorSet:
 
 
 def _detector(
-    name: str, channels: Sequence[ChannelSettings], rate_hz: float, hop: int
+    name: str, channels: Sequence[ChannelSettings], rate_hz: float, live: bool
 ) -> CoherentDetector | EnvelopeDetector:
+    hop = _HOP_LIVE if live else _HOP
     if name in ("envelope", "rectifier"):
         sided = any(channel.emission.side is not None for channel in channels)
         return EnvelopeDetector(
-            [envelope_band(channel, rate_hz) for channel in channels],
-            [message_taps(channel, rate_hz) for channel in channels],
+            [envelope_band(channel, rate_hz, live) for channel in channels],
+            [message_taps(channel, rate_hz, live) for channel in channels],
             _OVERSAMPLING_SIDED if sided else _OVERSAMPLING,
             hop,
         )
@@ -169,7 +170,7 @@ def _detector(
         weighted = np.array([[centred(taps, longest) for taps in pair] for pair in pairs])
         return WeightedSidebands(weighted, len(channels), rate_hz, hop)
     sideband = name if name in ("upper", "lower") else None
-    filters: list[list[ComplexTaps]] = [coherent_taps(channel, rate_hz, sideband) for channel in channels]
+    filters: list[list[ComplexTaps]] = [coherent_taps(channel, rate_hz, sideband, live) for channel in channels]
     longest = max(len(taps) for filters_of in filters for taps in filters_of)
     taps = np.array([[centred(taps, longest) for taps in filters_of] for filters_of in filters])
     return CoherentDetector(taps, len(channels), hop)

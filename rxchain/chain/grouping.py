@@ -47,6 +47,11 @@ class GroupKind:
     notched: bool = False
     tolerance_hz: float | None = None
 
+    @property
+    def envelope_only(self) -> bool:
+        """Whether no detector needs the carrier."""
+        return all(name in ("envelope", "rectifier") for name in self.candidates)
+
 
 def kind_of(channel: ChannelSettings, plan: BankPlan) -> GroupKind:
     """The kind of group that a channel belongs in."""

@@ -21,7 +21,7 @@ from rxchain.identify.naming import CANT_TELL
 from rxchain.meters.figures import Figures
 from rxchain.sources.protocol import SourceInfo
 from rxchain.streams import Block, Bools, ComplexBlock, FloatBlock, Floats, Reading
-from rxchain.tuning.channel_bank import ChannelBank
+from rxchain.tuning.channel_bank import HOPS_A_BATCH, LIVE_HOPS_A_BATCH, ChannelBank
 from rxchain.tuning.impulse_blanker import AUTO_DB, ImpulseBlanker
 from rxchain.tuning.plan import plan_bank
 from rxchain.units import format_frequency
@@ -77,7 +77,8 @@ class Receiver:
         self._plan = plan_bank(info.sample_rate_hz)
         for channel in channels:
             _check_inside(channel, info)
-        self._bank = ChannelBank(self._plan, [])
+        is_live = any(channel.delay == "live" for channel in channels)
+        self._bank = ChannelBank(self._plan, [], LIVE_HOPS_A_BATCH if is_live else HOPS_A_BATCH)
         self._runs: list[_Run] = []
         self._at: dict[int, tuple[ChannelGroup, int]] = {}
         self._next: dict[int, ChannelSettings] = {}

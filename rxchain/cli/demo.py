@@ -5,13 +5,16 @@ from __future__ import annotations
 import argparse
 from typing import Any
 
+from rxchain.cli.listen_options import add_listen_arguments, listen_of
+
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """The command's arguments."""
     parser.add_argument("--out", metavar="DIR", help="folder for audio and summary.json; a temporary one if left out")
     parser.add_argument(
-        "--pace", choices=("live", "fast"), default="fast", help="at its own pace, or as fast as it goes"
+        "--pace", choices=("live", "fast"), help="at its own pace, or as fast as it goes; fast unless listened to"
     )
+    add_listen_arguments(parser)
     parser.add_argument("--quiet", action="store_true", help="show nothing while receiving")
 
 
@@ -32,7 +35,14 @@ def run(arguments: argparse.Namespace) -> int:
     out = Path(arguments.out) if arguments.out else Path(tempfile.mkdtemp(prefix="rxchain-demo-"))
     print("An invented coast on 96 kHz of medium wave, 24 seconds, a station of each kind.", flush=True)
     request = Request(
-        station.source, {}, station.channels, out, None, live_pace=arguments.pace == "live", quiet=arguments.quiet
+        station.source,
+        {},
+        station.channels,
+        out,
+        None,
+        live_pace=arguments.pace == "live",
+        quiet=arguments.quiet,
+        listen=listen_of(arguments),
     )
     result = receive(request)
     receiver = result.receiver

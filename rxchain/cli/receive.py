@@ -52,7 +52,7 @@ def run(arguments: argparse.Namespace) -> int:
     from pathlib import Path
 
     from rxchain.chain.channel_settings import channel_from_text
-    from rxchain.chain.station import load_station
+    from rxchain.chain.station import LogRules, load_station
     from rxchain.cli.reception import Request, receive
 
     channels = tuple(channel_from_text(text) for text in arguments.channel)
@@ -63,7 +63,7 @@ def run(arguments: argparse.Namespace) -> int:
         source, options = station.source, station.source_options | options
         channels, station_log = station.channels + channels, station.log
     out = Path(arguments.out) if arguments.out else None
-    log = Path(arguments.log) if arguments.log else station_log
+    log = LogRules(Path(arguments.log)) if arguments.log else station_log
     listen = listen_of(arguments)
     live_pace = arguments.pace == "live"
     request = Request(source, options, channels, out, log, live_pace=live_pace, quiet=arguments.quiet, listen=listen)

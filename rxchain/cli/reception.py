@@ -25,7 +25,7 @@ from rxchain.chain.channel_settings import OFF, ChannelSettings
 from rxchain.chain.commands import Commands
 from rxchain.chain.receiver import Receiver
 from rxchain.chain.runner import Runner, span_text
-from rxchain.chain.station import check_names
+from rxchain.chain.station import LogRules, check_names
 from rxchain.cli.listen_options import Listen, live_where_heard, open_listening
 from rxchain.cli.main import one_line
 from rxchain.cli.operator import Operator
@@ -46,7 +46,7 @@ if TYPE_CHECKING:
 class Request:
     """What to receive, and what to do with it.
 
-    options : the source's further keys, as written. log : folder of the logbook, None for the usual one. listen : what to
+    options : the source's further keys, as written. log : the logbook, None for the usual one. listen : what to
     hear; it goes at live pace then.
     """
 
@@ -54,7 +54,7 @@ class Request:
     options: dict[str, str]
     channels: tuple[ChannelSettings, ...]
     out: Path | None
-    log: Path | None
+    log: LogRules | None
     live_pace: bool
     quiet: bool
     listen: Listen | None = None
@@ -73,7 +73,7 @@ def receive(request: Request) -> Result:
     if not request.channels:
         raise SettingError("channel", "(none)", "there is nothing to receive", "add --channel 'FREQUENCY EMISSION'")
     check_names(request.channels)
-    log_folder = _log_folder(request)
+    log_rules = _log_rules(request)
     _lift_allocation_threshold()
     options = parsed_options(request.options)
     if request.source.partition(":")[0] == RECEIVER_PREFIX:
@@ -89,7 +89,7 @@ def receive(request: Request) -> Result:
         receiver = Receiver(source.info, live_where_heard(request.channels, request.listen))
         listening = open_listening(request.listen, receiver) if request.listen else None
         sink = AudioFolder(request.out, receiver) if request.out else NoAudio()
-        log = None if log_folder is None else _station_log(log_folder, receiver)
+        log = None if log_rules is None else _station_log(log_rules, receiver)
     except BaseException:
         if listening is not None:
             listening.close()
@@ -133,26 +133,28 @@ def receive(request: Request) -> Result:
     return Result(receiver, 130 if outcome.stopped else 0)
 
 
-def _log_folder(request: Request) -> Path | None:
-    """Where the logbook goes; None where no channel is logged."""
+def _log_rules(request: Request) -> LogRules | None:
+    """Where the logbook goes and what it keeps; None where no channel is logged."""
     logged = [channel for channel in request.channels if channel.log != OFF]
     if not logged:
         if request.log is not None:
             raise SettingError(
-                "log", request.log, "no channel is logged", "give a channel log=transmissions or log=all"
+                "log", request.log.folder, "no channel is logged", "give a channel log=transmissions or log=all"
             )
         return None
     if request.log is not None:
         return request.log
     if request.out is None:
         raise SettingError("log", logged[0].log, "the logbook needs a folder", "add --log DIR or --out DIR")
-    return request.out / "log"
+    return LogRules(request.out / "log")
 
 
-def _station_log(folder: Path, receiver: Receiver) -> StationLog:
+def _station_log(rules: LogRules, receiver: Receiver) -> StationLog:
     from rxchain.logbook.station_log import StationLog
 
-    return StationLog(folder, receiver, time.monotonic, lambda: dt.datetime.now(dt.UTC))
+    return StationLog(
+        rules.folder, receiver, time.monotonic, lambda: dt.datetime.now(dt.UTC), rules.budget_bytes, rules.keep_days
+    )
 
 
 def _receiver_options(options: dict[str, Any], channels: tuple[ChannelSettings, ...]) -> dict[str, Any]:

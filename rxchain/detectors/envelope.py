@@ -19,19 +19,23 @@ from rxchain.kernels.overlap_save import WindowedStage, Windows
 from rxchain.kernels.smooth_numbers import next_smooth
 from rxchain.streams import ComplexBlock, FloatBlock
 
-STOP_DB = 80.0
-_SLOPE_HZ = 300.0
+STOP_DB, LIVE_STOP_DB = 80.0, 60.0
+_SLOPE_HZ, _LIVE_SLOPE_HZ = 300.0, 600.0
 # A full-wave rectifier's mean: the series of |cos| starts with 2 / pi. Its harmonics lie at twice the intermediate
 # frequency and up, so once they are filtered out nothing is left but the envelope at this scale.
 RECTIFIER_GAIN = np.float32(2.0 / np.pi)
 
 
-def emission_band(low_hz: float, high_hz: float, rate_hz: float) -> ComplexTaps:
-    """Taps that pass the emission's band, ``low_hz`` to ``high_hz`` from the carrier, with a 300 Hz slope beyond."""
-    n_taps = kaiser_taps(_SLOPE_HZ / rate_hz, STOP_DB)
-    limit_hz = rate_hz / 2.0 - _SLOPE_HZ / 2.0
-    low_hz, high_hz = max(low_hz - _SLOPE_HZ / 2.0, -limit_hz), min(high_hz + _SLOPE_HZ / 2.0, limit_hz)
-    return bandpass(n_taps, low_hz, high_hz, rate_hz, STOP_DB)
+def emission_band(low_hz: float, high_hz: float, rate_hz: float, live: bool = False) -> ComplexTaps:
+    """Taps that pass the emission's band, ``low_hz`` to ``high_hz`` from the carrier, with a 300 Hz slope beyond.
+
+    ``live`` : a slope of 600 Hz, in less than half the time.
+    """
+    slope_hz, stop_db = (_LIVE_SLOPE_HZ, LIVE_STOP_DB) if live else (_SLOPE_HZ, STOP_DB)
+    n_taps = kaiser_taps(slope_hz / rate_hz, stop_db)
+    limit_hz = rate_hz / 2.0 - slope_hz / 2.0
+    low_hz, high_hz = max(low_hz - slope_hz / 2.0, -limit_hz), min(high_hz + slope_hz / 2.0, limit_hz)
+    return bandpass(n_taps, low_hz, high_hz, rate_hz, stop_db)
 
 
 class EnvelopeDetector(WindowedStage[np.complex64]):

@@ -12,6 +12,7 @@ from rxchain.identify.window import REACH_HZ, prepare_window
 from rxchain.streams import ComplexBlock
 
 EVERY_S = 1.0
+_WATCHED_EVERY = 2  # of these times a firm name is doubted, oftener once there is doubt
 _PATIENCE_S = 3.0  # no guess is firm before: at one second two in a hundred are wrong and sure of it
 _WATCH_S = 2.0  # of a channel whose name is firm so much is looked at, for another emission
 _CHANGED = 2  # looks running that must name something else before a firm name is given up
@@ -45,6 +46,7 @@ class RunningIdentifier:
         n = len(self._keep_hz)
         self._held: ComplexBlock = np.zeros((n, 0), np.complex64)
         self._until_next = self._every
+        self._times = 0
         self._memories = [_Memory() for _ in range(n)]
 
     def process(self, iq: ComplexBlock) -> list[list[Guess]]:
@@ -67,9 +69,15 @@ class RunningIdentifier:
     def _guesses(self) -> list[Guess]:
         """All channels', those with windows of the same length measured together."""
         watched = round(_WATCH_S * self._rate_hz)
+        self._times += 1
+        rests = self._times % _WATCHED_EVERY != 0
+        guesses = {
+            k: one.firm for k, one in enumerate(self._memories) if one.firm is not None and rests and not one.against
+        }
         lengths = [min(one.samples, watched) if one.firm else one.samples for one in self._memories]
-        guesses: dict[int, Guess] = {}
-        for length in set(lengths):
+        for k in guesses:
+            lengths[k] = 0
+        for length in set(lengths) - {0}:
             channels = [k for k, one in enumerate(lengths) if one == length]
             for first in range(0, len(channels), _AT_A_TIME):
                 some = channels[first : first + _AT_A_TIME]

@@ -12,7 +12,7 @@ from scipy import ndimage
 from rxchain.identify.drift import without_drift
 from rxchain.identify.neighbours import without_neighbours
 from rxchain.identify.reference import mirror_fit
-from rxchain.identify.short_time import RATE_HZ
+from rxchain.identify.short_time import RATE_HZ, narrow_series
 from rxchain.kernels.smooth_numbers import next_smooth
 from rxchain.streams import ComplexBlock, Floats
 
@@ -21,6 +21,7 @@ REACH_HZ = 500.0  # how far from its nominal frequency a carrier is looked for
 # Of a line far from the nominal frequency; in a short stretch the harmonics of one syllable are lines too.
 _LINE_DB, _LINE_SHORT_DB, _SHORT_S = 15.0, 25.0, 2.5
 _PIECE_S = 1.0
+_BAND = 2.4  # times the reach: of the band in which a far carrier is looked for
 _AROUND_HZ = 22.0
 _LOUDEST, _OVER_LOUDEST = 0.99, 3.0  # an impulse stands so many times above the loudest hundredth
 _AROUND_SAMPLES, _OVER_AROUND = 121, 5.0  # and so many times above what lies around it
@@ -109,12 +110,15 @@ def _far_reference_hz(iq: ComplexBlock, reach_hz: float) -> float:
 
 
 def _strongest_line(iq: ComplexBlock, reach_hz: float) -> tuple[float, float]:
-    size = int(_PIECE_S * RATE_HZ)
+    rate_hz = min(RATE_HZ, _BAND * (reach_hz + 2.0 * _AROUND_HZ))
+    spectrum = np.asarray(scipy.fft.fft(iq[None], axis=1))
+    series = narrow_series(spectrum, 0.49 * rate_hz, rate_hz)[0]
+    size = int(_PIECE_S * rate_hz)
     window = np.hanning(size).astype(np.float32)
-    spectra = scipy.fft.fft(sliding_window_view(iq, size)[:: size // 4] * window, axis=1)
+    spectra = scipy.fft.fft(sliding_window_view(series, size)[:: size // 4] * window, axis=1)
     power = np.square(spectra.real) + np.square(spectra.imag)
     logs = scipy.fft.fftshift(np.mean(np.log(power + 1e-20), axis=0, dtype=np.float64))
-    frequency_hz = scipy.fft.fftshift(scipy.fft.fftfreq(size, 1.0 / RATE_HZ))
+    frequency_hz = scipy.fft.fftshift(scipy.fft.fftfreq(size, 1.0 / rate_hz))
     around = round(_AROUND_HZ * _PIECE_S)
     inside = np.flatnonzero(np.abs(frequency_hz) <= reach_hz)
     inside = inside[(inside >= around) & (inside < size - around)]
@@ -128,12 +132,15 @@ def _strongest_line(iq: ComplexBlock, reach_hz: float) -> tuple[float, float]:
 
 def _squared_centre_hz(iq: ComplexBlock, reach_hz: float) -> float | None:
     """The middle about which the stretch is mirrored, from the line of its square in quarter seconds; None if none."""
-    size = int(0.25 * RATE_HZ)
+    rate_hz = min(RATE_HZ, 2.0 * _BAND * reach_hz)
+    square = np.asarray(scipy.fft.fft((iq * iq)[None], axis=1))
+    series = narrow_series(square, 0.49 * rate_hz, rate_hz)[0]
+    size = int(0.25 * rate_hz)
     points = next_smooth(2 * size)
     window = np.hanning(size).astype(np.float32)
-    pieces = sliding_window_view(iq * iq, size)[:: size // 2] * window
+    pieces = sliding_window_view(series, size)[:: size // 2] * window
     power = np.sum(np.square(np.abs(scipy.fft.fft(pieces, points, axis=1))), axis=0, dtype=np.float64)
-    centre_hz = scipy.fft.fftfreq(points, 1.0 / RATE_HZ) / 2.0
+    centre_hz = scipy.fft.fftfreq(points, 1.0 / rate_hz) / 2.0
     left: Floats = np.where(np.abs(centre_hz) <= reach_hz, power, 0.0)
     candidates = []
     for _ in range(4):

@@ -15,12 +15,14 @@ from rxchain.chain.receiver import ChannelTap, Receiver
 from rxchain.logbook.channel_log import ChannelLog, Open
 from rxchain.logbook.clips import Clip, finish_clip, growing_paths
 from rxchain.logbook.on_air import on_air
-from rxchain.logbook.store import LogStore
+from rxchain.logbook.pruning import prune, remove_files
+from rxchain.logbook.store import LogStore, read_entries
 from rxchain.logbook.transmissions import Span
 from rxchain.meters.figures import Figures
 
 _WRITE_EVERY_S = 0.5  # of the clock on the wall: what a power cut costs
 _RETRY_S = 10.0
+_MAKE_ROOM_EVERY_S = 900.0
 _HOUR_S = 3_600.0
 _FADE_DB = 10.0  # below the median level of a transmission
 _MOST_WAITING = 10_000  # entries that wait for a full disk to have room again
@@ -30,18 +32,26 @@ class StationLog:
     """Logs the channels of a receiver whose ``log`` key asks for it.
 
     clock : seconds, steadily rising. now : UTC; for entries about the run itself, and for what has no time of its own.
+    budget_bytes, keep_days : what is removed to make room, at the start and every quarter of an hour; None: nothing.
     Raises :class:`~rxchain.errors.RequestError` where the folder cannot be used.
     """
 
     def __init__(
-        self, folder: Path, receiver: Receiver, clock: Callable[[], float], now: Callable[[], dt.datetime]
+        self,
+        folder: Path,
+        receiver: Receiver,
+        clock: Callable[[], float],
+        now: Callable[[], dt.datetime],
+        budget_bytes: int | None = None,
+        keep_days: float | None = None,
     ) -> None:
         self.folder = folder
         self._receiver, self._clock, self._now = receiver, clock, now
         self._store = LogStore(folder)
         self._channels: dict[int, ChannelLog] = {}
         self._waiting: list[tuple[str, dict[str, Any], str | None]] = []
-        self._written = self._retry_at = clock()
+        self._written = self._retry_at = self._pruned = clock()
+        self._budget_bytes, self._keep_days = budget_bytes, keep_days
         self._gaps_entered = 0
         self._is_full = False
         self._run = f"{self._store.number + 1:08d}"
@@ -61,6 +71,17 @@ class StationLog:
                 "clips_closed_after_a_break": recovered,
             },
         )
+        self._make_room()
+
+    def _make_room(self) -> None:
+        """Removes what is beyond the budget or the age."""
+        self._pruned = self._clock()
+        if self._budget_bytes is None and self._keep_days is None:
+            return
+        try:
+            prune(self._store, self._now(), self._budget_bytes, self._keep_days)
+        except OSError as error:
+            self._disk_trouble(error)
 
     def after_block(self) -> None:
         """To be called after each block, in the numeric thread: takes what was received since the last time."""
@@ -69,6 +90,8 @@ class StationLog:
         self._enter_gaps()
         if self._clock() - self._written >= _WRITE_EVERY_S:
             self._write_all()
+        if self._clock() - self._pruned >= _MAKE_ROOM_EVERY_S:
+            self._make_room()
         self._finish_complete(at_end=False)
 
     def word(self, text: str, place: int | None = None) -> None:
@@ -315,6 +338,9 @@ def _recover(store: LogStore) -> int:
             "files": files,
         }
         store.append("transmission", body, key)
+    # A break between the entry of a removal and the removal itself leaves files that are gone by the book.
+    for entry in read_entries(store.folder, "removal"):
+        remove_files(store.folder, [str(path) for path in entry.body.get("paths", [])])
     for path in (path for key, _ in left for path in growing_paths(store.folder, key)):
         path.unlink(missing_ok=True)
     return len(left)

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import contextlib
+import os
 import threading
 from collections.abc import Callable
 from typing import Protocol
@@ -15,9 +17,10 @@ from rxchain.sinks.hearing import Hearing
 from rxchain.sinks.playback import START_VOLUME_DB, Playback, Voice
 from rxchain.streams import FloatBlock
 
-_BLOCK_S = 0.010
+_BLOCK_S = 0.005
 _FIRST_WAIT_S, _LONGEST_WAIT_S = 0.5, 4.0
 _STUCK_S = 2.0
+_NICE = -10
 # An output that takes samples faster than any real one would is held to this pace.
 _FASTEST, _AHEAD_S = 1.005, 0.2
 
@@ -122,6 +125,8 @@ class Listening:
             abandon()
 
     def _play(self) -> None:
+        with contextlib.suppress(OSError, AttributeError):  # where the system lets us: it is little work, and urgent
+            os.setpriority(os.PRIO_PROCESS, threading.get_native_id(), _NICE)
         try:
             while not (self._closing.is_set() and self._output is None):
                 if self._output is None:
@@ -142,7 +147,9 @@ class Listening:
                 if self._closing.is_set() and not playback.clock.is_playing:
                     silent_s += _BLOCK_S  # what is in the output's own buffer has yet to be heard
                 frames = playback.render(n)
-                self._dry += output.write(frames)
+                if output.write(frames):
+                    self._dry += 1
+                    playback.clock.hole()
                 now_s = self._alive_s = self._clock()
                 ahead_s = max(0.0, ahead_s - _FASTEST * (now_s - last_s)) + _BLOCK_S
                 last_s = now_s

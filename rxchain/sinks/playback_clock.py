@@ -19,7 +19,9 @@ _FASTEST = 1e-3  # a sixtieth of a semitone: unheard
 _LEARNING_S = 0.1  # silence in which the rhythm of arrival is learnt before anything is played
 _ARRIVALS = 3  # and at least so many arrivals are seen in it
 _STARVED_S = 0.15  # nothing new for so long: the stream has stopped
-_EXCESS_S = 0.25  # reserve beyond what is wanted, that is skipped instead of played fast
+_EXCESS_S = 0.04  # reserve beyond what is wanted, that is skipped instead of played fast
+_SETTLED_S = 5.0  # of playing; what piles up or runs out before is of the start's making, and teaches nothing
+_HOLE_WINDOW_S, _HOLE_EXCESS_S = 0.2, 0.01  # after the output ran dry: what it did not play is left out soon
 _GUARD_S = 0.005
 _SHYER_S = 0.010  # more reserve after every time it ran out
 _LARGEST_RESERVE_S = 0.15
@@ -56,6 +58,8 @@ class PlaybackClock:
         self.position_s = 0.0
         self._newest_s = -math.inf
         self._skip_s = 0.0
+        self._hole = False
+        self._ever_played_s = 0.0
         self.ending = False  # the stream has come to its end: running out is what is expected
         self.restart()
 
@@ -75,13 +79,21 @@ class PlaybackClock:
         self._unchanged_s = math.inf
         self._learnt_s = 0.0
         self._arrivals = 0
-        self._least_s = math.inf
-        self._window_s = 0.0
+        self._begin_window()
+
+    def hole(self) -> None:
+        """The output ran dry: it played nothing for a while, and what should have been played then is left out."""
+        if self._playing:
+            self._begin_window()
+            self._hole = True
+
+    def _begin_window(self) -> None:
+        self._least_s, self._window_s, self._hole = math.inf, 0.0, False
 
     def shift(self, difference_s: float) -> None:
         """Goes elsewhere in the stream at once: what is heard now runs that much ahead of what was heard before."""
         self.position_s += difference_s
-        self._least_s, self._window_s = math.inf, 0.0
+        self._begin_window()
 
     def next(self, newest_s: float) -> Piece:
         """The next piece; ``newest_s`` is the stream time up to which everything heard is there."""
@@ -112,12 +124,13 @@ class PlaybackClock:
             self.shift(self._skip_s)
             left_s, self._skip_s = left_s - self._skip_s, 0.0
         if left_s < self._needs_s:
-            if not self.ending:
-                self.underruns += 1
+            self.underruns += not self.ending
+            if not self.ending and self._ever_played_s > _SETTLED_S:
                 self._reserve_s = min(self._reserve_s + _SHYER_S, _LARGEST_RESERVE_S)
             self.restart()
             self._unchanged_s = 0.0
             return Piece(None, 1.0, False)
+        self._ever_played_s += self._piece_s
         self._steer(left_s)
         piece = Piece(self.position_s, self._speed, self._skip_s > 0.0 or left_s < 2 * self._needs_s)
         self.position_s += self._piece_s * self._speed
@@ -126,14 +139,16 @@ class PlaybackClock:
     def _steer(self, left_s: float) -> None:
         self._least_s = min(self._least_s, left_s)
         self._window_s += self._piece_s
-        if self._window_s < _WINDOW_S:
+        if self._window_s < (_HOLE_WINDOW_S if self._hole else _WINDOW_S):
             return
         error_s = self._least_s - self._reserve_s
-        if error_s > _EXCESS_S:
-            self.skips += 1
+        if error_s > (_HOLE_EXCESS_S if self._hole else _EXCESS_S):
+            self.skips += self._ever_played_s > _SETTLED_S and not self._hole
             self._skip_s = error_s
+        elif self._hole:
+            pass  # too short a look to steer by
         else:
             integral = self.speed_integral + _INTEGRAL * error_s
             self.speed_integral = min(max(integral, -_FASTEST), _FASTEST)
             self._speed = 1.0 + min(max(_PROPORTIONAL * error_s + self.speed_integral, -_FASTEST), _FASTEST)
-        self._least_s, self._window_s = math.inf, 0.0
+        self._begin_window()

@@ -18,7 +18,7 @@ INSTALL = "pip install 'pyrtlsdr[lib]'"
 _DIRECT_SAMPLING = {"i": 1, "q": 2}
 # The chip's two ranges of sample rates (its data sheet is not public; common practice).
 _RATES_HZ = ((225_001.0, 300_000.0), (900_001.0, 3_200_000.0))
-_BUFFERS = 32  # that the driver keeps in flight; each a few milliseconds of slack for this program
+_BUFFERS = 64  # that the driver keeps in flight; each a few milliseconds of slack for this program
 # What the USB library's codes mean to an operator (libusb's list of error codes).
 _MEANINGS = {
     -1: "USB input or output error",

@@ -27,14 +27,14 @@ from rxchain.sources.rtlsdr_driver import Device, ReceiverSettings, Refusal, che
 from rxchain.sources.sample_formats import CU8
 from rxchain.streams import Block
 
-_BUFFER_S = 0.0137
+_BUFFER_S = 0.0068
 _BUFFER_UNIT = 512  # bytes; the driver asks for multiples
 _QUEUED_S = 1.8
 _STALLED_S, _HANGS_S = 0.5, 2.0
 _LOOK_S = 0.1
 _FIRST_WAIT_S, _LONGEST_WAIT_S = 0.5, 8.0
 _MARGIN_S = 0.1  # of a gap is not told yet, for the buffer that ends it was under way
-_RETUNED_BUFFERS = 6  # hold samples of both frequencies; longer than the channel bank's memory
+_RETUNED_BUFFERS = 12  # hold samples of both frequencies; longer than the channel bank's memory
 
 
 @dataclass(slots=True)

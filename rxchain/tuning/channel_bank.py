@@ -3,7 +3,7 @@
 Overlap-save: a channel takes ``m`` bins about its frequency, multiplies them by its own filter's response (centred on
 its exact frequency, whatever the bin spacing), and an ``m``-point inverse transform gives it at the low rate; what is
 left of its frequency is turned out by a phase made from the absolute sample index, so it never drifts. Four hops go
-through each transform call, because ``scipy.fft`` works on four rows side by side.
+through each transform call, because ``scipy.fft`` works on four rows side by side; two where delay matters.
 """
 
 from __future__ import annotations
@@ -20,24 +20,25 @@ from rxchain.kernels.fir import lowpass
 from rxchain.streams import ComplexBlock, Floats
 from rxchain.tuning.plan import STOP_DB, BankPlan
 
-HOPS_A_BATCH = 4
+HOPS_A_BATCH, LIVE_HOPS_A_BATCH = 4, 2
 
 
 class ChannelBank:
     """Tunes, filters and decimates groups of channels; each group has its own width and number of channels.
 
     process(iq) : complex64, (n,), any n, full scale 1.0. Returns one complex64 block ``(channels, samples)`` a group,
-        in the order of the groups; a batch of four hops at a time, so often empty.
+        in the order of the groups; a batch of hops at a time, so often empty.
     Channel sample ``k`` is the instant ``k / rate`` after the first sample of the stream; the filter's delay is out.
     """
 
-    def __init__(self, plan: BankPlan, groups: Sequence[tuple[int, Floats]]) -> None:
+    def __init__(self, plan: BankPlan, groups: Sequence[tuple[int, Floats]], hops_a_batch: int = HOPS_A_BATCH) -> None:
         """``groups`` : bins and channel offsets from the capture's centre, in hertz, of each group."""
         self.plan = plan
+        self._hops_a_batch = hops_a_batch
         self._groups = [_Group(plan, bins, np.asarray(offsets_hz, dtype=np.float64)) for bins, offsets_hz in groups]
         widest = max((g.bins for g in self._groups), default=0)
-        self._spectrum = np.empty((HOPS_A_BATCH, plan.length + widest), np.complex64)
-        self._batch = HOPS_A_BATCH * plan.hop
+        self._spectrum = np.empty((self._hops_a_batch, plan.length + widest), np.complex64)
+        self._batch = self._hops_a_batch * plan.hop
         self._pending = np.zeros(plan.overlap + self._batch, np.complex64)
         self.reset()
 
@@ -66,7 +67,7 @@ class ChannelBank:
         place = len(self._groups) if before is None else before
         self._groups.insert(place, group)
         if self.plan.length + bins > self._spectrum.shape[1]:
-            wider = np.empty((HOPS_A_BATCH, self.plan.length + bins), np.complex64)
+            wider = np.empty((self._hops_a_batch, self.plan.length + bins), np.complex64)
             wider[:, : self._spectrum.shape[1]] = self._spectrum
             self._spectrum = wider
         first = max(0, self._hops * group.hop - self.plan.overlap_of(bins) // 2)
@@ -137,7 +138,7 @@ class ChannelBank:
             block = block[:, lead:]  # the first outputs lie before the stream's first sample
             self._delivered[k] += block.shape[1]
             blocks.append(block)
-        self._hops += HOPS_A_BATCH
+        self._hops += self._hops_a_batch
         self._pending[: plan.overlap] = self._pending[self._batch :].copy()
         self._filled = plan.overlap
         return blocks

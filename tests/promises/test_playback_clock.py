@@ -5,7 +5,7 @@ import pytest
 
 from rxchain.sinks.playback_clock import PlaybackClock
 
-PIECE_S = 0.005
+PIECE_S = 0.01
 BLOCK_S = 0.0273  # 65 536 samples at 2.4 MS/s: what a receiver's buffer holds
 JITTER_S = 0.004  # a busy machine's: blocks come so much later than they should, at most
 LAG_S = 0.080  # how far audio runs behind the stream
