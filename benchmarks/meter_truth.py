@@ -1,6 +1,6 @@
 """Meters against the truth: error, stated uncertainty and how often the one covers the other.
 
-Run: ``python benchmarks/meter_truth.py [--quick | --all] [FOLDER]``, FOLDER being where recordings of voices are (``speech/*.wav`` in
+Run: ``python benchmarks/meter_truth.py [--quick | --all] [FOLDER]``, FOLDER with recordings of voices (``speech/*.wav`` in
 it; ``../shared/recordings`` beside the repository if it is not given). Goals: SNR within 0.5 dB from 0 to 40 dB; depth within 1
 point at 30 dB C/N over 10 s of voice; 58 to 78 % of errors within the stated deviation, over at least 200 readings. The
 channels are turned by the truth; a follower's own errors are added where a table says so.
