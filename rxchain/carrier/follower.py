@@ -212,7 +212,7 @@ class CarrierFollower:
         newest, followed = self._line.latest(self._spectra.length), self._watch.active & self._watch.confirmed
         lines = self._acquisition.search(newest, ~followed, ~self._watch.active)
         if self._recipe.power == 1:
-            lines += self._takeover.look(newest, followed, self._level, self._filter.frequency_hz)
+            lines += self._takeover.look(newest, followed, self._watch.locked, self._level, self._filter.frequency_hz)
         for found in lines:
             self._take_up(found)
 

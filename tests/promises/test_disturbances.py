@@ -155,3 +155,18 @@ def test_bad_samples_of_a_recording_do_no_lasting_harm(value: float) -> None:
     whole, harmed = received(iq)[later], received(disturbed)[later]
     assert np.std(whole) == pytest.approx(0.05 / np.sqrt(2), rel=0.01)
     np.testing.assert_allclose(harmed, whole, rtol=0, atol=0.01 * float(np.std(whole)))
+
+
+def test_a_short_whistle_does_not_take_a_carriers_place() -> None:
+    """20 dB stronger, 210 Hz away, for a quarter of a second: another carrier would stay."""
+    n = 9 * int(RATE_HZ)
+    block = followed("carrier", n).astype(np.complex128)
+    t = np.arange(n) / RATE_HZ
+    whistling = (t >= 5.0) & (t < 5.25)
+    block[0, whistling] += np.exp(-2j * np.pi * 210.0 * t[whistling])
+    stage = STAGES["follower, carrier"].make(1)
+    pieces = [stage.process(block.astype(np.complex64)), stage.flush()]
+    lock, offset_hz = (np.concatenate([getattr(p.track, name)[0] for p in pieces]) for name in ("lock", "offset_hz"))
+    after = int(4.5 * RATE_HZ) // stage.hop_samples
+    assert (lock[after:] == Lock.LOCKED).all()
+    np.testing.assert_allclose(offset_hz[after:], 7.3, atol=WRONG_HZ)
