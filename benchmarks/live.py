@@ -52,6 +52,7 @@ spent = os.times()
 last, sound = seen[-1], [one.sound for one in seen if one.sound]
 json.dump({"code": code, "elapsed_s": last.elapsed_s, "lost": last.samples_lost, "gaps": last.gaps,
     "late": last.late_blocks, "short": last.short_buffers, "reopened": last.reopened,
+    "overruns": sys.modules["rtlsdr"].librtlsdr.standin_overruns() if "rtlsdr" in sys.modules else 0,
     "overload": last.overload_fraction, "cpu_s": spent.user + spent.system, "wall_s": time.monotonic() - started,
     "underruns": sound[-1].underruns if sound else 0, "skips": sound[-1].skips if sound else 0,
     "losses": sound[-1].losses if sound else 0,
@@ -92,7 +93,9 @@ def main() -> None:
     with tempfile.TemporaryDirectory(prefix="live-") as name:
         folder = Path(name)
         build(folder)
-        rows = [case(folder, detector, s) for detector, s in (("envelope", seconds), ("coherent", seconds / 8))]
+        rows = [
+            case(folder, detector, s) for detector, s in (("envelope", seconds), ("coherent", max(30.0, seconds / 8)))
+        ]
         file_share = file_run(folder)
     lines = table(rows, file_share)
     print("\n".join(lines))
@@ -107,8 +110,8 @@ def table(rows: list[dict], file_share: float) -> list[str]:
         "",
         "`python benchmarks/live.py`: stand-in for the USB driver at 2.4 MS/s, 20 A3E channels (meters, gain control,",
         "squelch, files), one heard through PortAudio into a sound server without a card, dashboard on a terminal of",
-        f"100x30. {os.cpu_count()} cores, shared with other work that kept {os.getloadavg()[2]:.0f} more processes waiting for",
-        f"them (load average of 15 minutes); the program ran at nice {os.nice(0)} so as to get its share all the same.",
+        f"100x30. {os.cpu_count()} cores, shared with other work (load average {os.getloadavg()[0]:.0f}); "
+        f"the program ran at {priority()}.",
         "",
         "| heard through | seconds | samples lost | buffers late | underruns, skips | delay inside, median (largest) | "
         "delay outside, median (largest) | wanted | CPU |",
@@ -118,7 +121,8 @@ def table(rows: list[dict], file_share: float) -> list[str]:
         inside, outside = 1e3 * np.array(row["delays_s"]), 1e3 * row["outside_s"]
         wanted = ENVELOPE_MS if row["detector"] == "envelope" else COHERENT_MS
         lines.append(
-            f"| {row['detector']} | {row['elapsed_s']:.0f} | {row['lost']} in {row['gaps']} gaps | {row['late']} | "
+            f"| {row['detector']} | {row['elapsed_s']:.0f} | "
+            f"{row['lost']} in {row['gaps']} gaps ({row['overruns']} buffers not fetched) | {row['late']} | "
             f"{row['underruns']}, {row['skips']} | {np.median(inside):.0f} ms ({inside.max():.0f}) | "
             f"{np.median(outside):.0f} ms ({outside.max():.0f}), {len(outside)} tones | {wanted} ms | "
             f"{100 * row['cpu_s'] / row['wall_s']:.0f} % of a core |"
@@ -130,6 +134,11 @@ def table(rows: list[dict], file_share: float) -> list[str]:
         "buffer with a tone's first sample to the tone's coming out of the sound server.",
     ]
     return lines
+
+
+def priority() -> str:
+    """The priority of this process and its children, in words."""
+    return "real-time priority" if os.sched_getscheduler(0) else f"nice {os.nice(0)}"
 
 
 def build(folder: Path) -> None:

@@ -95,6 +95,7 @@ class Receiver:
         self.losses: deque[tuple[float, float]] = deque(maxlen=_MOST_EVENTS)  # seconds: when, how much
         self.overloads: deque[tuple[float, int]] = deque(maxlen=_MOST_EVENTS)  # when, how many samples
         self._in_gap = False  # a gap may be told in parts
+        self._gap_from_s = 0.0
         trends = len(channels)
         self._offsets: list[deque[float]] = [deque(maxlen=_TREND_POINTS) for _ in range(trends)]
         self._snrs: list[deque[float]] = [deque(maxlen=_TREND_POINTS) for _ in range(trends)]
@@ -120,11 +121,12 @@ class Receiver:
         """The audio that this block completes."""
         audio: list[ChannelAudio] = []
         if block.samples_lost:
-            self.gaps += not self._in_gap
+            if not self._in_gap:
+                self.gaps += 1
+                self._gap_from_s = self.elapsed_s
             rate_hz = self.info.sample_rate_hz
             for run in self._runs:
                 run.group.mark_lost(self.elapsed_s, block.samples_lost / rate_hz)
-            self.losses.append((self.elapsed_s, block.samples_lost / rate_hz))
             left = block.samples_lost
             while left:
                 n = min(left, _SILENCE_PIECE)
@@ -133,7 +135,9 @@ class Receiver:
             self.samples_lost += block.samples_lost
         if block.overloaded:
             self.overloads.append((self.elapsed_s, block.overloaded))
-        self._in_gap = not len(block.iq) and (self._in_gap or block.samples_lost > 0)
+        self._in_gap = self._in_gap or block.samples_lost > 0
+        if self._in_gap and len(block.iq):
+            self._end_gap()
         if block.centre_hz is not None:
             self._bank.retune(block.centre_hz - self.info.centre_hz)
             self.info = replace(self.info, centre_hz=block.centre_hz)
@@ -141,8 +145,14 @@ class Receiver:
         self.samples += len(block.iq)
         return audio + self._through(block.iq)
 
+    def _end_gap(self) -> None:
+        self._in_gap = False
+        self.losses.append((self._gap_from_s, self.elapsed_s - self._gap_from_s))
+
     def flush(self) -> list[ChannelAudio]:
         """The last of every channel's audio; each is as long as the stream."""
+        if self._in_gap:
+            self._end_gap()
         audio = [] if self._blanker is None else self._tuned(self._blanker.flush())
         audio += self._delivered(self._bank.flush())
         for run in list(self._runs):

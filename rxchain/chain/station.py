@@ -19,7 +19,7 @@
     from = "118MHz"
     to = "118.5MHz"
     spacing = "25kHz"
-    emission = "A3E"               # and any other key of a channel
+    emission = "A3E"               # and any other key of a channel; 25kHz and 8.33kHz are those of the airband
 
 Everything that is wrong is told at once, each with its table, key, value and rule.
 """
@@ -31,7 +31,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TypeVar
 
-from rxchain.chain.channel_settings import ChannelSettings, channel_from_table
+from rxchain.chain.channel_settings import SPACINGS, ChannelSettings, channel_from_table
 from rxchain.errors import RequestError, SettingError
 from rxchain.tables import load_table
 from rxchain.units import format_frequency, parse_bytes, parse_frequency_hz
@@ -157,12 +157,17 @@ def _grid(table: Mapping[str, object], folder: Path) -> list[ChannelSettings]:
         if key in table:
             raise SettingError(key, table[key], "follows from the grid", "leave it out")
     low_hz, high_hz, step_hz = (parse_frequency_hz(str(table[key]), key) for key in ("from", "to", "spacing"))
+    spacing = str(table["spacing"])
+    if spacing == "8.33kHz":
+        step_hz = 25_000.0 / 3.0  # which is what the trade means by it
     if step_hz <= 0.0 or high_hz < low_hz:
         raise SettingError("spacing", table["spacing"], "must be above 0, and from at most to")
     count = int((high_hz - low_hz) / step_hz + 1.0 + 1e-6)
     if count > MOST_CHANNELS:
         raise SettingError("spacing", table["spacing"], f"makes {count} channels; at most {MOST_CHANNELS} are served")
     keys = {key: value for key, value in table.items() if key not in ("from", "to", "spacing")}
+    if spacing in SPACINGS and table.get("emission") == "A3E":
+        keys["spacing"] = spacing
     frequencies_hz = [low_hz + k * step_hz for k in range(count)]
     return [
         channel_from_table({**keys, "frequency": f"{hz:.3f}Hz", "name": format_frequency(round(hz))}, folder)

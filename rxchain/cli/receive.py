@@ -16,7 +16,7 @@ examples:
 
 A channel is FREQUENCY EMISSION [key=value ...], with auto for an EMISSION that is to be found out; the keys are those of
 a [[channel]] table:
-name, audio, detector, sideband, delay, align, beat, vestige, slope, transmit_response, agc, squelch,
+name, audio, detector, sideband, spacing, delay, align, beat, vestige, slope, transmit_response, agc, squelch,
 notch, blanker, deemphasis, log."""
 
 

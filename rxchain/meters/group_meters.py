@@ -99,6 +99,9 @@ class GroupMeters:
 
     def mark_lost(self, first_sample: int, n_samples: int) -> None:
         """Samples of the upright stream that were lost: whatever chunk they touch counts in no figure."""
+        if self._lost and self._lost[-1][0] <= first_sample <= self._lost[-1][1]:  # a long gap is told in many parts
+            first_sample, n_samples = self._lost[-1][0], first_sample + n_samples - self._lost[-1][0]
+            del self._lost[-1]
         self._lost.append((first_sample, first_sample + n_samples))
 
     def process(self, turned: Turned) -> None:

@@ -33,6 +33,7 @@ _QUEUED_S = 1.8
 _STALLED_S, _HANGS_S = 0.5, 2.0
 _LOOK_S = 0.1
 _FIRST_WAIT_S, _LONGEST_WAIT_S = 0.5, 8.0
+_TELL_S = 0.02  # a gap is told in parts as small as what would have come, so that what is heard stays on its delay
 _MARGIN_S = 0.1  # of a gap is not told yet, for the buffer that ends it was under way
 _RETUNED_BUFFERS = 12  # hold samples of both frequencies; longer than the channel bank's memory
 
@@ -234,7 +235,7 @@ class RtlsdrReceiver:
                 told += missing
                 yield Block(np.zeros(0, np.complex64), index + told, missing)
             with self._condition:
-                self._condition.wait_for(lambda: self._closing, timeout=_LOOK_S)
+                self._condition.wait_for(lambda: self._closing, timeout=_TELL_S)
                 if self._closing:
                     return
         self._trouble = None

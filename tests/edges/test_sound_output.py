@@ -255,7 +255,7 @@ def test_an_output_that_goes_and_comes_back_is_said_counted_and_used_again(monke
     after(bench, 200)
     status = bench.listening.status()
     assert (status.trouble, status.losses, status.heard, status.output) == (None, 0, "one", "bench")
-    assert 0.0 < status.delay_s < 0.15
+    assert 0.0 < status.delay_s < 0.25  # blocks of 20 ms, and a start that has not settled
     bench.there = False
     while bench.listening.status().trouble is None:
         pass

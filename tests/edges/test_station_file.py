@@ -30,9 +30,7 @@ def test_shipped_stations_can_be_read(path):
 
 
 def test_a_grid_is_a_channel_at_each_step(tmp_path):
-    grid = (
-        '[[grid]]\nfrom = "119MHz"\nto = "119.1MHz"\nspacing = "8.333333kHz"\nemission = "A3E"\naudio = "300-2700Hz"\n'
-    )
+    grid = '[[grid]]\nfrom = "119MHz"\nto = "119.1MHz"\nspacing = "8.33kHz"\nemission = "A3E"\naudio = "300-2700Hz"\n'
     made = station(tmp_path, SOURCE + grid)
     frequencies = [channel.frequency_hz for channel in made.channels]
     assert len(frequencies) == 13
@@ -40,6 +38,7 @@ def test_a_grid_is_a_channel_at_each_step(tmp_path):
     assert frequencies[-1] == pytest.approx(119.1e6, abs=1.0)
     assert {channel.audio_hz for channel in made.channels} == {(300.0, 2_700.0)}
     assert made.channels[3].name == "119.025MHz"
+    assert {channel.spacing for channel in made.channels} == {"8.33kHz"}
 
 
 def test_a_log_has_rules_and_logs_what_does_not_refuse(tmp_path):

@@ -129,3 +129,18 @@ def test_a_channel_is_still_received_after_the_receiver_was_tuned_elsewhere():
     # The other channel lies outside now: silence, not an error.
     assert np.abs(np.concatenate(made[1], axis=1)[0][int(2.6 * 12_000) :]).max() < 1e-6
     assert receiver.info.centre_hz == 1.02e6
+
+
+def test_a_gap_that_is_told_in_parts_is_one_gap():
+    rate_hz = 48e3
+    receiver = Receiver(SourceInfo("receiver", "test", rate_hz, 1e6, None, None), channels("1MHz A3E"))
+    iq = np.full(4_800, 0.1, np.complex64)
+    nothing = iq[:0]
+    receiver.process(Block(iq, 0))
+    for k in range(1, 11):
+        receiver.process(Block(nothing, 4_800 + 960 * k, 960))
+    receiver.process(Block(iq, 14_880, 480))
+    receiver.process(Block(iq, 19_680 + 240, 240))
+    assert receiver.gaps == 2
+    assert receiver.samples_lost == 9_600 + 480 + 240
+    assert list(receiver.losses) == [pytest.approx((0.1, 0.21)), pytest.approx((0.41, 0.005))]
