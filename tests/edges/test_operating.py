@@ -214,7 +214,7 @@ def test_every_step_from_every_emission_is_a_channel_that_can_be_received(name):
 def test_steps_come_round():
     channel = channel_from_text("1MHz A3E name=x")
     assert alterations.next_emission(alterations.next_emission(channel), -1).emission is channel.emission
-    for step, n in ((alterations.next_detector, 4), (alterations.next_sideband, 4), (alterations.next_squelch, 4)):
+    for step, n in ((alterations.next_detector, 4), (alterations.next_sideband, 5), (alterations.next_squelch, 4)):
         turned = channel
         for _ in range(n):
             turned = step(turned)
