@@ -73,8 +73,9 @@ class GainControl(WindowedStage[np.float32]):
         settings, n = self._settings, self._piece
         n_channels = self._input_shape[0]
         amplitude = _piece_peaks(np.abs(window), n)
-        # fmax: a piece that is no number must not be held for ever.
-        peaks_db = 20.0 * np.log10(np.fmax(amplitude.astype(np.float64), 1e-10))
+        # A piece that is no number, or infinite, would be held for ever.
+        amplitude[~np.isfinite(amplitude)] = 0.0
+        peaks_db = 20.0 * np.log10(np.maximum(amplitude.astype(np.float64), 1e-10))
         self._peaks_db = np.concatenate([self._peaks_db, peaks_db], axis=1)
         highest = _sliding_maximum(self._peaks_db, 2 * _AHEAD + 1)
         self._peaks_db = self._peaks_db[:, self._quantum :]
