@@ -15,19 +15,19 @@ from rxchain.chain.channel_settings import AUTO, OFF, ChannelSettings, as_emissi
 from rxchain.chain.grouping import grouped, kind_of
 from rxchain.chain.handover import FADE_S, Handover
 from rxchain.chain.status import ChannelStatus
+from rxchain.chain.trends import Trends
 from rxchain.emissions import Emission
 from rxchain.errors import SettingError
 from rxchain.identify.naming import CANT_TELL
 from rxchain.meters.figures import Figures
 from rxchain.sources.protocol import SourceInfo
-from rxchain.streams import Block, Bools, ComplexBlock, FloatBlock, Floats, Reading
+from rxchain.streams import Block, Bools, ComplexBlock, FloatBlock, Floats
 from rxchain.tuning.channel_bank import HOPS_A_BATCH, LIVE_HOPS_A_BATCH, ChannelBank
 from rxchain.tuning.impulse_blanker import AUTO_DB, ImpulseBlanker
 from rxchain.tuning.plan import plan_bank
 from rxchain.units import format_frequency
 
 _SILENCE_PIECE = 1 << 18
-_TREND_POINTS = 60
 _SPECTRUM_PARTS = 480
 _MOST_EVENTS = 100_000
 # How long a new group is left to find its carrier and its gain before it is heard.
@@ -96,10 +96,7 @@ class Receiver:
         self.overloads: deque[tuple[float, int]] = deque(maxlen=_MOST_EVENTS)  # when, how many samples
         self._in_gap = False  # a gap may be told in parts
         self._gap_from_s = 0.0
-        trends = len(channels)
-        self._offsets: list[deque[float]] = [deque(maxlen=_TREND_POINTS) for _ in range(trends)]
-        self._snrs: list[deque[float]] = [deque(maxlen=_TREND_POINTS) for _ in range(trends)]
-        self._trend_s = 0.0
+        self._trends = Trends(len(channels))
         self._recent: dict[int, Figures] = {}
         self._overall: dict[int, Figures] = {}
 
@@ -205,12 +202,7 @@ class Receiver:
             if overall:
                 figures = run.group.overall_figures()
                 self._overall.update((run.places[row], figures[row]) for row in current)
-        if self.elapsed_s >= self._trend_s:
-            self._trend_s = self.elapsed_s + 1.0
-            for place in range(len(self.channels)):
-                recent = self._recent[place]
-                self._offsets[place].append(_value(recent.carrier_offset_hz))
-                self._snrs[place].append(_value(recent.snr_db))
+        self._trends.note(self.elapsed_s, [self._recent[place] for place in range(len(self.channels))])
 
     def spectrum_dbfs(self) -> Floats:
         """Power across the capture at this moment, in equal parts, lowest frequency first; (parts,)."""
@@ -243,8 +235,8 @@ class Receiver:
             gain_db=group.gain_db[row],
             recent=self._recent.get(place, Figures()),
             overall=self._overall.get(place, Figures()),
-            offset_trend_hz=np.array(self._offsets[place], dtype=np.float64),
-            snr_trend_db=np.array(self._snrs[place], dtype=np.float64),
+            offset_trend_hz=self._trends.offset_hz(place),
+            snr_trend_db=self._trends.snr_db(place),
         )
 
     def identified(self, place: int) -> tuple[str, bool, float]:
@@ -401,7 +393,3 @@ def _check_inside(channel: ChannelSettings, info: SourceInfo) -> None:
         raise SettingError(
             "frequency", format_frequency(channel.frequency_hz), f"the capture reaches from {low} to {high}"
         )
-
-
-def _value(reading: Reading | None) -> float:
-    return float("nan") if reading is None else reading.value
