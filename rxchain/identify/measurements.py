@@ -11,6 +11,7 @@ from rxchain.identify.carrier_measurements import carrier_measurements
 from rxchain.identify.mirror_measurements import mirror_measurements
 from rxchain.identify.reference import find_references
 from rxchain.identify.short_time import INNER, decibels, prepare
+from rxchain.identify.steady_tones import steady_tone_shares
 from rxchain.streams import Bools, Floats
 
 # What each says, and the range in which it says it.
@@ -49,7 +50,8 @@ class Measured:
 
     values : float64, (channels, 21), in the order of :data:`NAMES`. reference_hz : carrier, suppressed carrier, or 0.
     is_line, is_square : where that comes from. is_upper : whether the upper side is the stronger. floor : noise density,
-    in units of the channel's own power per hertz. seconds : length of the windows.
+    in units of the channel's own power per hertz. steady_tones : share of the message that is held tones, 0 to 1; no
+    evidence, but names need more of it where there are. seconds : length of the windows.
     """
 
     values: Floats
@@ -58,6 +60,7 @@ class Measured:
     is_square: Bools
     is_upper: Bools
     is_empty: Bools
+    steady_tones: Floats
     seconds: float
 
 
@@ -77,4 +80,7 @@ def measure(iq: NDArray[np.complexfloating], reach_hz: float = 120.0) -> Measure
     }
     values = np.stack([by_name[name] for name in NAMES], axis=1).astype(np.float64)
     values = np.clip(np.nan_to_num(values, nan=0.0, posinf=50.0, neginf=-50.0), LOWEST, HIGHEST)
-    return Measured(values, found.hz, found.is_line, found.is_square, is_upper, windows.is_empty, windows.seconds)
+    steady = steady_tone_shares(windows, found)
+    return Measured(
+        values, found.hz, found.is_line, found.is_square, is_upper, windows.is_empty, steady, windows.seconds
+    )

@@ -8,12 +8,18 @@ import numpy as np
 
 from rxchain.identify.evidence import FAMILIES, FAMILY_OF, SIDED, TEMPLATES, EvidenceTable, by_family, evidence_table
 from rxchain.identify.measurements import MEANING, NAMES, Measured
+from rxchain.identify.steady_tones import STEADY
 from rxchain.streams import Floats
 
 NOISE_ONLY, FOREIGN, CANT_TELL = "noise only", "not of this family", "can't tell"
 DOUBT = 0.5  # below it no name is given
 SURE = 0.9
+SURE_OF_TONES = 0.97  # a name for what carries held tones; below it half are wrong
 _REASONS = 3
+_VESTIGIAL = ("C3E", "VSB-SC")
+_OTHER_SIDE = (
+    -0.5
+)  # balance beyond a vestige, which only the true side passes: a faded vestige can be the stronger below
 
 # What limits the telling apart of two families, whatever the method.
 _PAIRS: dict[frozenset[str], str] = {
@@ -34,6 +40,7 @@ _PAIRS: dict[frozenset[str], str] = {
     frozenset(("A1A", "OTHER")): "a key held down is a bare carrier",
     frozenset(("DSB-SC", "OTHER")): "two-level data on a double sideband are two-phase keying",
 }
+_TONES = "its message is steady tones, which many emissions would carry alike"
 _ASSUMED_SIDE = "no carrier shows: the side follows from the frequency taken for it"
 
 
@@ -79,7 +86,7 @@ def name_one(measured: Measured, row: int, scores: Floats, table: EvidenceTable)
     chances = by_family(scores[None])[0]
     first, second = (int(k) for k in np.argsort(-chances)[:2])
     one, other = _likeliest(first, scores), _likeliest(second, scores)
-    is_upper = bool(measured.is_upper[row])
+    is_upper = _is_upper(measured, row, FAMILIES[first])
     name = _name(first, is_upper)
     confidence = float(chances[first])
     notes = []
@@ -88,11 +95,15 @@ def name_one(measured: Measured, row: int, scores: Floats, table: EvidenceTable)
     has_reference = bool(measured.is_line[row] or measured.is_square[row])
     if FAMILIES[first] in SIDED and not has_reference:
         notes.append(_ASSUMED_SIDE)
+    is_told = confidence >= DOUBT
+    if measured.steady_tones[row] > STEADY and _may_carry_tones(one) and confidence < SURE_OF_TONES:
+        is_told = False
+        notes.append(_TONES)
     return Guess(
-        name=name if confidence >= DOUBT else CANT_TELL,
+        name=name if is_told else CANT_TELL,
         confidence=confidence,
         kind=TEMPLATES[one].split("/")[1] if name == FOREIGN else "",
-        runner_up=_name(second, is_upper),
+        runner_up=_name(second, _is_upper(measured, row, FAMILIES[second])),
         runner_up_confidence=float(chances[second]),
         reasons=_reasons(measured.values[row], measured.seconds, one, other, table),
         notes=tuple(notes),
@@ -100,6 +111,18 @@ def name_one(measured: Measured, row: int, scores: Floats, table: EvidenceTable)
         reference="line" if measured.is_line[row] else "square" if measured.is_square[row] else "nominal",
         seconds=measured.seconds,
     )
+
+
+def _is_upper(measured: Measured, row: int, family: str) -> bool:
+    """The stronger side; of a vestigial emission that which is the stronger beyond the vestige."""
+    is_other = family in _VESTIGIAL and measured.values[row, NAMES.index("bal_hi")] < _OTHER_SIDE
+    return bool(measured.is_upper[row]) != bool(is_other)
+
+
+def _may_carry_tones(template: int) -> bool:
+    """Whether held tones could be its message, or it be taken for what carries them; keying and data are no tones."""
+    family, _, kind = TEMPLATES[template].partition("/")
+    return family not in ("NOISE", "A1A", "OTHER") or kind == "bare carrier"
 
 
 def _name(family: int, is_upper: bool) -> str:

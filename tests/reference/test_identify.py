@@ -16,7 +16,7 @@ from rxchain.identify.learning.foreign import frequency_modulated, shift_keyed
 from rxchain.identify.learning.material import Material
 from rxchain.identify.learning.windows import Conditions, draw_window
 from rxchain.identify.measurements import NAMES, measure
-from rxchain.identify.naming import FOREIGN, NOISE_ONLY, SURE, name_all
+from rxchain.identify.naming import CANT_TELL, FOREIGN, NOISE_ONLY, SURE, name_all, name_one
 from rxchain.identify.running import RunningIdentifier
 from rxchain.identify.window import at_rate, blank_impulses, prepare_window
 from rxchain.synthesis.render import render
@@ -175,6 +175,63 @@ def test_voices_that_took_no_part_in_learning(shared_recordings):
             sure_and_wrong += guess.name != expected and guess.confidence > SURE
     assert right >= FAMILIES_RIGHT * total
     assert sure_and_wrong <= 1
+
+
+def vestigial_with_a_faded_main_side():
+    """VSB-SC-USB of three tones whose lowest has all but gone above and not in the vestige below."""
+    t = np.arange(int(5 * RATE_HZ)) / RATE_HZ
+    draws = np.random.default_rng(2).standard_normal((2, len(t))) * 1e-2
+    above = 0.3 * np.exp(2j * np.pi * 1_500 * t) + 0.3 * np.exp(2j * np.pi * 2_100 * t)
+    below = 0.7 * np.exp(-2j * np.pi * 300 * t)
+    return (above + below + draws[0] + 1j * draws[1]).astype(np.complex64)
+
+
+@pytest.mark.parametrize("name", ["VSB-SC-USB", "C3E-USB"])
+def test_the_side_of_a_vestigial_emission_is_that_beyond_the_vestige(name):
+    """Algebra: beyond its vestige one side is sent, so the balance there tells which, whatever has faded below."""
+    family = name.removesuffix("-USB")
+    upper = vestigial_with_a_faded_main_side()
+    for iq, side in ((upper, "USB"), (np.conj(upper), "LSB")):
+        measured = measure(iq[None])
+        assert measured.is_upper[0] == (side == "LSB")  # the stronger side over all is the other one
+        scores = np.where(np.array(TEMPLATES) == family, 0.0, -20.0)
+        assert name_one(measured, 0, scores, evidence_table()).name == f"{family}-{side}"
+
+
+HELD_TONES, VOICED_TONES = 0.9, 0.55  # two tones are all there is; a voice's harmonics move within half a second
+
+
+def test_a_message_of_held_tones_is_known_for_one():
+    t = np.arange(int(5 * RATE_HZ)) / RATE_HZ
+    two = 0.3 * np.cos(2 * np.pi * 700 * t) + 0.3 * np.cos(2 * np.pi * 1_130 * t)
+    noise = np.random.default_rng(2).standard_normal((2, len(t))) * 1e-3
+    rows = [1 + two, two, hilbert(two), 1 + 0 * two, 1 + 0.02 * np.cos(2 * np.pi * 100 * t)]
+    shares = measure((np.array(rows) + noise[0] + 1j * noise[1]).astype(np.complex64)).steady_tones
+    assert shares[:3] == pytest.approx(1.0, abs=1.0 - HELD_TONES)
+    assert np.all(shares[3:] < VOICED_TONES)  # a bare carrier has no message, nor is its hum one
+
+
+def test_voices_are_no_held_tones(shared_recordings):
+    material = Material(sorted((shared_recordings / "speech").glob("*.wav")))
+    rng = np.random.default_rng(8)
+    drawn = [draw_window(name, 5.0, Conditions(20.0), material.plain, rng)[0] for name in ("A3E", "J3E", "QAM", "R3E")]
+    assert np.all(measure(np.array(drawn)).steady_tones < VOICED_TONES)
+
+
+def test_held_tones_need_more_evidence_than_voices():
+    t = np.arange(int(5 * RATE_HZ)) / RATE_HZ
+    noise = np.random.default_rng(2).standard_normal((2, len(t))) * 1e-3
+    measured = measure((np.exp(2j * np.pi * 800 * t) + noise[0] + 1j * noise[1]).astype(np.complex64)[None])
+    chance = np.zeros(len(TEMPLATES))
+    for wanted, name in ((0.9, CANT_TELL), (0.99, "J3E-USB")):
+        chance[:] = (1.0 - wanted) / (len(TEMPLATES) - 1)
+        chance[TEMPLATES.index("J3E")] = wanted
+        guess = name_one(measured, 0, np.log(chance), evidence_table())
+        assert guess.name == name
+        assert guess.confidence == pytest.approx(wanted)
+        assert any("steady tones" in note for note in guess.notes) == (name == CANT_TELL)
+    keyed = np.where(np.array(TEMPLATES) == "A1A", 2.0, 0.0)  # of keying, lines say nothing
+    assert not any("steady tones" in note for note in name_one(measured, 0, keyed, evidence_table()).notes)
 
 
 def test_impulses_are_blanked_and_counted():
